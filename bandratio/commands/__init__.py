@@ -1,0 +1,1 @@
+"""One module for each word of the command line; each holds one click command named ``command``."""
