@@ -1,0 +1,7 @@
+"""Decisions: thresholds, p-values, false discovery rates."""
+
+from .scene import scene_threshold
+from .separation import Separation
+from .threshold import Threshold, as_threshold
+
+__all__ = ["Separation", "Threshold", "as_threshold", "scene_threshold"]
