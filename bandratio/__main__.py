@@ -16,7 +16,7 @@ _FOLDER = Path(__file__).with_name("commands")
 class _Words(click.Group):
     """Finds the words in the commands folder and imports only the one that is asked for."""
 
-    def list_commands(self, ctx: click.Context) -> list[str]:
+    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002 (the name is click's)
         return sorted(file.stem for file in _FOLDER.glob("[a-z]*.py"))
 
     def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
