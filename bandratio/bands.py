@@ -2,14 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from ._checks import listed
 
-__all__ = ["TOLERANCE_NM", "BandNotFoundError", "nearest_band", "nearest_bands", "wavelength_array"]
+__all__ = [
+    "TOLERANCE_NM",
+    "BandNotFoundError",
+    "nearest_band",
+    "nearest_bands",
+    "values_per_band",
+    "wavelength_array",
+]
 
 #: How far a band's centre may lie from the nominal wavelength [nm] (common practice, no source).
 TOLERANCE_NM = 15.0
@@ -103,3 +111,53 @@ def nearest_bands(
                 f"{wanted[position]:g} nm; give a smaller tolerance=… or other wavelengths"
             )
     return found
+
+
+def values_per_band(
+    name: str, value: Any, centres: ArrayLike, tolerance: float = TOLERANCE_NM
+) -> NDArray[np.float64]:
+    """One value for each band, from a number for all, ``{nm: value}`` or a list as long as the bands.
+
+    Parameters
+    ----------
+    name : str
+        What it is, for the messages.
+    value : number, mapping or sequence
+        The value or values.
+    centres : array_like, shape (band,)
+        Band centres [nm].
+    tolerance : float
+        Largest distance between a band's centre and the wavelength of a value [nm].
+
+    Returns
+    -------
+    ndarray, shape (band,)
+
+    Raises
+    ------
+    ValueError
+        If a list has another length, or a band has no value near enough.
+
+    Examples
+    --------
+    >>> values_per_band("k", {480: 0.6, 700: 0.7}, [481, 700])
+    array([0.6, 0.7])
+    """
+    bands = np.asarray(centres, dtype=float)
+    if isinstance(value, Mapping):
+        given = np.array(list(value), dtype=float)
+        numbers = list(value.values())
+        try:
+            return np.array(
+                [numbers[nearest_band(given, centre, tolerance)] for centre in bands], dtype=float
+            )
+        except BandNotFoundError:
+            raise BandNotFoundError(
+                f"{name} has values at {listed(given.tolist(), 'nm')}, but the cube's bands are "
+                f"{listed(bands.tolist(), 'nm')}; give one within {tolerance:g} nm of every band"
+            ) from None
+    if np.ndim(value) == 0:
+        return np.full(bands.size, float(value))
+    if len(value) != bands.size:
+        raise ValueError(f"{name} has {len(value)} values, but the cube has {bands.size} bands")
+    return np.asarray(value, dtype=float)

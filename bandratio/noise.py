@@ -14,7 +14,7 @@ import xarray as xr
 from numpy.typing import ArrayLike, NDArray
 
 from ._checks import listed, non_negative, suggestion
-from .bands import TOLERANCE_NM, BandNotFoundError, nearest_band
+from .bands import TOLERANCE_NM, nearest_band, values_per_band
 
 __all__ = ["BandNoise", "Noise", "PerBand"]
 
@@ -267,22 +267,7 @@ def _labels(labels: Any) -> xr.DataArray | NDArray:
 def _for_bands(part: str, value: Any, centres: NDArray, tolerance: float) -> xr.DataArray:
     if isinstance(value, xr.DataArray):
         value = dict(zip(value["wavelength"].values.tolist(), value.values.tolist(), strict=True))
-    if isinstance(value, Mapping):
-        given = np.array(list(value))
-        try:
-            numbers = [value[given[nearest_band(given, centre, tolerance)]] for centre in centres]
-        except BandNotFoundError:
-            raise BandNotFoundError(
-                f"{part} has values at {listed(given.tolist(), 'nm')}, but the cube's bands are "
-                f"{listed(centres.tolist(), 'nm')}; give one within {tolerance:g} nm of every band"
-            ) from None
-        array = np.array(numbers, dtype=float)
-    elif np.ndim(value) == 0:
-        array = np.full(centres.size, float(value))
-    elif len(value) != centres.size:
-        raise ValueError(f"{part} has {len(value)} values, but the cube has {centres.size} bands")
-    else:
-        array = np.asarray(value, dtype=float)
+    array = values_per_band(part, value, centres, tolerance)
     return xr.DataArray(array, dims="wavelength", coords={"wavelength": centres})
 
 
