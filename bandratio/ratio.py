@@ -321,7 +321,8 @@ class BandRatio:
         C = xr.DataArray(matrix, dims=("wavelength", "wavelength_2"))
         g2 = g.drop_vars("wavelength").rename(wavelength="wavelength_2")
         variance = xr.dot(g.drop_vars("wavelength"), C, g2, dim=("wavelength", "wavelength_2"))
-        return (variance.clip(min=0) ** 0.5).rename(f"{self.name}_sigma")
+        sigma: xr.DataArray = variance.clip(min=0) ** 0.5
+        return sigma.rename(f"{self.name}_sigma")
 
     def _terms(
         self, cube: xr.DataArray, tolerance: float

@@ -1,0 +1,234 @@
+"""Cube and parameters and noise to maps: a Dataset of values, each with its standard uncertainty, at any size."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import xarray as xr
+from numpy.typing import NDArray
+
+from ._checks import listed
+from .bands import TOLERANCE_NM
+from .catalogue import resolve, shoulder_of
+from .cube import is_lazy, require_cube
+from .noise import BandNoise, Noise
+from .ratio import BandRatio
+
+if TYPE_CHECKING:
+    from .kernel import NoiseTable, RatioTable
+
+__all__ = ["PARTS", "map_attributes", "parameters"]
+
+#: What is appended to a parameter's name for each plane that the kernel makes, with its readable name.
+PARTS = {
+    "": "",
+    "_sigma": "standard uncertainty of ",
+    "_sigma_random": "random part of the standard uncertainty of ",
+    "_sigma_shared": "shared part of the standard uncertainty of ",
+}
+
+
+def parameters(
+    cube: xr.DataArray,
+    noise: Noise | None = None,
+    names: Sequence[str | BandRatio] | Mapping[str, BandRatio] | str | BandRatio | None = None,
+    *,
+    tolerance: float = TOLERANCE_NM,
+    parts: bool = False,
+) -> xr.Dataset:
+    """Maps of spectral parameters, each with its standard uncertainty.
+
+    Parameters
+    ----------
+    cube : DataArray of float, dimensions (wavelength, …)
+        Reflectance as a fraction, band centres [nm]. Missing is NaN. A lazy (dask) cube gives lazy maps.
+    noise : Noise, optional
+        What is known about the errors; without it there are values only.
+    names : sequence of str and BandRatio, or mapping of str to BandRatio, optional
+        Which parameters; None gives every parameter of the catalogue that the bands allow and says in the
+        attribute `left_out` which it left out and why. In a list, a missing band is an error.
+    tolerance : float
+        Largest distance between a nominal wavelength and a band's centre [nm].
+    parts : bool
+        Also give the random and the shared part of each sigma, since a region's mean averages one and not
+        the other.
+
+    Returns
+    -------
+    Dataset, dimensions of `cube` without `wavelength`
+        ``<name>``, with noise ``<name>_sigma``, with parts also ``<name>_sigma_random`` and
+        ``<name>_sigma_shared``, in the dtype of the cube. NaN where a band is missing or the denominator is
+        not positive.
+
+    Raises
+    ------
+    ValueError, TypeError
+        If the cube is none, a name is unknown, a band is missing, two names clash, or the noise does not fit.
+
+    Examples
+    --------
+    >>> import bandratio as br
+    >>> soil = br.as_cube([0.12562, 0.15204, 0.17002, 0.18566], [480, 600, 700, 830])
+    >>> maps = br.parameters(soil, br.Noise(random=0.001), ["red_slope", br.BandRatio({600: 1}, {480: 1})])
+    >>> print(f"{float(maps.red_slope):.2f} ± {float(maps.red_slope_sigma):.2f} {maps.red_slope.units}")
+    11.17 ± 0.88 % per 100 nm
+    """
+    cube = require_cube(cube)
+    if noise is not None and not isinstance(noise, Noise):
+        raise TypeError(f"noise must be a br.Noise, got {type(noise).__name__}; br.Noise(random={noise!r})?")
+    if parts and noise is None:
+        raise ValueError("parts=True splits the sigmas, for which noise=… is needed")
+    centres = np.asarray(cube["wavelength"].values, dtype=float)
+    ratios, left_out = resolve(names, centres, tolerance=tolerance)
+    if not ratios:
+        raise ValueError(
+            f"the bands {listed(centres.tolist(), 'nm')} allow no parameter of the catalogue; give names=… with "
+            "BandRatio objects"
+        )
+    for name in ratios:
+        if name in cube.dims or name in cube.coords:
+            raise ValueError(
+                f"{name!r} is the name of one of the cube's coordinates; give the ratio another name"
+            )
+
+    planes = _planes(cube, noise, list(ratios.values()), centres, tolerance, parts)
+    suffixes = list(PARTS)[: planes.shape[1]]
+    dims = tuple(dim for dim in cube.dims if dim != "wavelength")
+    coords = {name: c for name, c in cube.coords.items() if "wavelength" not in c.dims}
+    variables = {}
+    for k, (name, ratio) in enumerate(ratios.items()):
+        for part, suffix in enumerate(suffixes):
+            variables[name + suffix] = xr.Variable(
+                dims, planes[k, part], map_attributes(ratio, suffix, suffixes, centres, tolerance)
+            )
+    attributes: dict[str, Any] = {"Conventions": "CF-1.11", "bandratio_version": _version()}
+    attributes["wavelengths"] = listed(centres.tolist(), "nm")
+    attributes["noise"] = noise.describe() if noise is not None else "none given"
+    attributes["left_out"] = "; ".join(f"{name}: {reason}" for name, reason in left_out.items())
+    return xr.Dataset(variables, coords, attributes)
+
+
+def map_attributes(
+    ratio: BandRatio, suffix: str, suffixes: Sequence[str], centres: NDArray, tolerance: float
+) -> dict[str, Any]:
+    """Attributes of one variable of the maps."""
+    name = ratio.name
+    readable = ratio.long_name or ratio.definition
+    attributes: dict[str, Any] = {"long_name": PARTS[suffix] + readable, "units": ratio.units}
+    if suffix:
+        return attributes
+    attributes["definition"] = ratio.definition
+    if ratio.source:
+        attributes["source"] = ratio.source
+    n, d = ratio.weights_for(centres, tolerance)
+    attributes["bands"] = listed(centres[(n != 0) | (d != 0)].tolist(), "nm")
+    shoulder = shoulder_of(ratio)
+    if shoulder is not None:
+        attributes["shoulder"] = shoulder
+    if len(suffixes) > 1:
+        attributes["ancillary_variables"] = " ".join(name + other for other in suffixes[1:])
+    return attributes
+
+
+def _version() -> str:
+    from . import __version__
+
+    return __version__
+
+
+def _planes(
+    cube: xr.DataArray,
+    noise: Noise | None,
+    ratios: list[BandRatio],
+    centres: NDArray,
+    tolerance: float,
+    parts: bool,
+) -> Any:
+    """The kernel's planes, shape (ratio, plane, …): numpy for a cube in memory, dask for a lazy one."""
+    from .kernel import NoiseTable, RatioTable, cores
+
+    table = RatioTable.build(ratios, centres, tolerance)
+    noises, random_map = None, None
+    if noise is not None:
+        band = noise.for_cube(cube, tolerance)
+        noises = _noise_table(band, NoiseTable)
+        if noise.random_is_map:
+            dims = [dim for dim in cube.dims if dim != "wavelength"]
+            random_map = (
+                band.random if "wavelength" in band.random.dims else band.random.expand_dims("wavelength")
+            )
+            missing = {dim: cube.sizes[dim] for dim in dims if dim not in random_map.dims}
+            random_map = random_map.expand_dims(missing).transpose("wavelength", *dims)
+    if is_lazy(cube) or (random_map is not None and is_lazy(random_map)):
+        return _lazy_planes(cube, table, noises, random_map, parts)
+    per_pixel = None if random_map is None else random_map.values
+    return _block(cube.values, per_pixel, table=table, noises=noises, parts=parts, threads=cores())
+
+
+def _noise_table(band: BandNoise, build: type[NoiseTable]) -> NoiseTable:
+    random = band.random.values if band.random.dims == ("wavelength",) else np.zeros(band.shot.size)
+    return build.build(
+        random,
+        band.shot.values,
+        band.relative.values,
+        band.band_gain.values,
+        band.band_offset.values,
+        band.common_gain,
+    )
+
+
+def _lazy_planes(
+    cube: xr.DataArray,
+    table: RatioTable,
+    noises: NoiseTable | None,
+    random_map: xr.DataArray | None,
+    parts: bool,
+) -> Any:
+    import dask.array as da
+    from dask.base import tokenize
+
+    bands = cube.chunk({"wavelength": -1}).data
+    planes = 1 if noises is None else 4 if parts else 2
+    inputs = [bands]
+    if random_map is not None:
+        spatial = dict(zip(cube.dims[1:], bands.chunks[1:], strict=True))
+        inputs.append(random_map.chunk({"wavelength": -1, **spatial}).data)
+    # one task a block makes all planes; they are taken apart afterwards
+    return da.map_blocks(
+        _block,
+        *inputs,
+        table=table,
+        noises=noises,
+        parts=parts,
+        dtype=cube.dtype,
+        chunks=((table.scale.size,), (planes,), *bands.chunks[1:]),
+        new_axis=1,
+        meta=np.empty((0,) * (bands.ndim + 1), cube.dtype),
+        name="parameters-" + tokenize(bands.name, table, noises, parts, *(a.name for a in inputs[1:])),
+    )
+
+
+def _block(
+    reflectance: NDArray,
+    random_map: NDArray | None = None,
+    *,
+    table: RatioTable,
+    noises: NoiseTable | None,
+    parts: bool,
+    threads: int = 1,
+) -> NDArray:
+    from .kernel import evaluate
+
+    bands, shape = reflectance.shape[0], reflectance.shape[1:]
+    per_pixel = None if random_map is None else np.broadcast_to(random_map, (random_map.shape[0], *shape))
+    planes = evaluate(
+        reflectance.reshape(bands, -1),
+        table,
+        noises,
+        random_map=None if per_pixel is None else per_pixel.reshape(per_pixel.shape[0], -1),
+        parts=parts,
+        threads=threads,
+    )
+    return planes.reshape(*planes.shape[:2], *shape)
