@@ -95,18 +95,18 @@ def _order_statistics(values: Any, ranks: list[int]) -> list[float]:
 
 
 def _lazy_order_statistic(values: Any, rank: int, held: int = 1_000_000) -> float:
-    import dask
     import dask.array as da
 
+    histogram: Any = da.histogram
     blocks = values.ravel().astype(float)
     finite = da.where(da.isfinite(blocks), blocks, np.nan)
-    low, high = (float(edge) for edge in dask.compute(da.nanmin(finite), da.nanmax(finite)))
+    low, high = (float(edge) for edge in da.stack([da.nanmin(finite), da.nanmax(finite)]).compute())
     below = 0
     while True:
         edges = np.linspace(low, high, _BINS + 1)
         if low == high or not (np.diff(edges) > 0).all():
             return low
-        counts = da.histogram(blocks[da.isfinite(blocks)], bins=edges)[0].compute()
+        counts = histogram(blocks[da.isfinite(blocks)], bins=edges)[0].compute()
         cumulative = below + np.cumsum(counts)
         chosen = int(np.searchsorted(cumulative, rank, side="right"))
         inside, below = int(counts[chosen]), int(cumulative[chosen] - counts[chosen])

@@ -45,7 +45,7 @@ class Separation:
     findings: tuple[str, ...] = ()
 
     def describe(self) -> dict[str, Any]:
-        """What the separation is, without the curve, as a mapping that JSON can hold."""
+        """Tell what the separation is, without the curve, in a mapping that JSON can hold."""
         return {
             name: list(value) if isinstance(value, tuple) else value
             for name, value in vars(self).items()

@@ -88,7 +88,7 @@ class Threshold:
             object.__setattr__(self, "shoulder", shoulder)
 
     def for_quantity(self, quantity: str) -> Threshold:
-        """The same threshold, declared to hold for another reflectance quantity: your word that they are alike.
+        """Declare that the threshold holds for another reflectance quantity too: your word that they are alike.
 
         Parameters
         ----------
@@ -183,7 +183,7 @@ class Threshold:
         )
 
     def describe(self) -> dict[str, Any]:
-        """What the threshold is, as a mapping that JSON can hold (the record in a result's attributes)."""
+        """Tell what the threshold is in a mapping that JSON can hold (the record in a result's attributes)."""
         told: dict[str, Any] = {
             "parameter": self.parameter,
             "value": self.value,
@@ -198,7 +198,7 @@ class Threshold:
 
     @classmethod
     def from_description(cls, told: Mapping[str, Any]) -> Threshold:
-        """The threshold that :meth:`describe` told of, without what it rested on."""
+        """Make the threshold that :meth:`describe` told of, without what it rested on."""
         known = ("value", "sigma", "origin", "parameter", "shoulder", "quantity")
         missing = {"value"} - set(told)
         if missing:
@@ -207,7 +207,7 @@ class Threshold:
 
 
 def as_threshold(value: float | Threshold, parameter: str = "") -> Threshold:
-    """A plain number as an absolute threshold without uncertainty; a `Threshold` as it is.
+    """Take a plain number for an absolute threshold without uncertainty, and a `Threshold` as it is.
 
     Parameters
     ----------
@@ -228,7 +228,7 @@ def as_threshold(value: float | Threshold, parameter: str = "") -> Threshold:
     """
     if isinstance(value, Threshold):
         return value
-    if isinstance(value, bool) or (not isinstance(value, int | float) and not hasattr(value, "__float__")):
+    if isinstance(value, (bool, str)) or not hasattr(value, "__float__"):
         raise TypeError(
             f"a threshold of {parameter or 'a parameter'} must be a number or a Threshold, got {value!r}"
         )
