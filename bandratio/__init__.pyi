@@ -1,6 +1,7 @@
 # The public names, one import a room, in alphabetical order of rooms.
 from .catalogue import mafic_depth, named_ratio, red_slope, reflectance_700, uv_vis_slope
 from .cube import as_cube
+from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold
 from .maps import parameters
 from .noise import Noise
