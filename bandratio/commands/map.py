@@ -1,0 +1,52 @@
+"""``bandratio map``: the main job, a scene in, parameter maps with standard uncertainties out."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import click
+
+from ._options import band_options, noise_from, noise_options, numbers
+
+__all__ = ["command"]
+
+
+@click.command(
+    epilog="Example: bandratio map scene.tif -o maps.tif --random 0.001 --band-gain 0.01 --names red_slope,mafic_depth"
+)
+@click.argument("scene")
+@click.option(
+    "-o", "--output", required=True, metavar="OUT", help="Maps to write: .tif, .zarr or .nc by its ending."
+)
+@click.option(
+    "--names", metavar="NAME,NAME,…", help="Which parameters; all that the bands allow unless given."
+)
+@click.option(
+    "--tolerance", default=15.0, show_default=True, help="How far a band may lie from its wavelength [nm]."
+)
+@click.option("--parts", is_flag=True, help="Also write the random and the shared part of each sigma.")
+@click.option("--overwrite", is_flag=True, help="Replace OUT where it exists.")
+@band_options
+@noise_options
+def command(
+    scene: str, output: str, names: str | None, tolerance: float, parts: bool, overwrite: bool, **given: Any
+) -> None:
+    """Map the spectral parameters of SCENE, each with its standard uncertainty."""
+    from ..files import open_cube, write_maps
+    from ..maps import parameters
+    from ._closing_table import closing_table
+
+    noise = noise_from(given)
+    cube = open_cube(
+        scene,
+        numbers(given["wavelengths"], "--wavelengths"),
+        fwhm=numbers(given["fwhm"], "--fwhm"),
+        quantity=given["quantity"],
+        scale=given["scale"],
+        nodata=given["nodata"],
+    )
+    wanted = names.split(",") if names else None
+    maps = parameters(cube, noise, wanted, tolerance=tolerance, parts=parts)
+    written = write_maps(maps, output, overwrite=overwrite)
+    click.echo(closing_table(maps))
+    click.echo(f"written to {written}")
