@@ -2,7 +2,7 @@
 from .catalogue import mafic_depth, named_ratio, red_slope, reflectance_700, uv_vis_slope
 from .cube import as_cube
 from .cube_findings import check_cube
-from .detection import Threshold, scene_threshold
+from .detection import Threshold, scene_threshold, thresholds
 from .maps import parameters
 from .noise import Noise
 from .ratio import BandRatio

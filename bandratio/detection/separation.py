@@ -21,8 +21,11 @@ class Separation:
     area : float
         Area under the ROC curve: the probability that a wanted specimen lies further on the wanted side than an
         unwanted one (0.5: told apart no better than by a coin).
-    area_interval, value_interval : (float, float)
-        95 % bootstrap intervals over specimens of the area, and of the threshold's value.
+    area_interval : (float, float)
+        95 % interval of the area: the bootstrap over specimens, widened to the one that holds for few specimens and
+        for separated groups (Newcombe 2006).
+    value_interval : (float, float)
+        95 % bootstrap interval over specimens of the threshold's value.
     detection_rate, false_alarm_rate : float
         Share of the wanted, and of the unwanted, on the wanted side of the threshold.
     n_wanted, n_unwanted : int
