@@ -1,9 +1,12 @@
 # The public names, one import a room, in alphabetical order of rooms.
 from .catalogue import mafic_depth, named_ratio, red_slope, reflectance_700, uv_vis_slope
+from .composition import iron_oxide, optical_maturity, titanium_oxide
 from .cube import as_cube
 from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold, thresholds
+from .files import open_cube
 from .maps import parameters
+from .materials import material_table
 from .noise import Noise
 from .ratio import BandRatio
 from .spectra import band_average, effective_wavelength, open_library, reference_spectra

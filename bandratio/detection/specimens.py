@@ -108,7 +108,7 @@ def area_interval(area: float, n_wanted: int, n_unwanted: int) -> tuple[float, f
     --------
     >>> low, high = area_interval(1.0, 9, 4)
     >>> round(low, 2), high
-    (0.68, 1.0)
+    (0.67, 1.0)
     """
     A = np.linspace(0, 1, 100_001)
     half = (n_wanted + n_unwanted) / 2 - 1
