@@ -271,7 +271,8 @@ def bounds_loop(
             at_zero[k] = excess[k]
             if dropout[i]:
                 at_zero[k] = excess[k] - m1 * b
-        least, most = 1.0, 0.0
+        least, most, least_of_any, most_of_any = 1.0, 0.0, 1.0, 0.0
+        possible = False
         for j in range(ice_starts[bins[i]], ice_starts[bins[i] + 1]):
             low, top = 0.0, 1.0
             for k in range(edges):
@@ -280,8 +281,14 @@ def bounds_loop(
                     low = max(low, min(excess[k], at_zero[k]) * per)
                 elif per < 0:
                     top = min(top, min(excess[k], at_zero[k]) * per)
-            least = min(least, low)
-            most = max(most, top)
+            if low <= top:  # else no fraction of this ice leads there
+                possible = True
+                least = min(least, low)
+                most = max(most, top)
+            least_of_any = min(least_of_any, low)
+            most_of_any = max(most_of_any, top)
+        if not possible:
+            least, most = least_of_any, most_of_any
         lower[i] = min(max(least, 0.0), 1.0)
         upper[i] = min(max(most, 0.0), 1.0)
 

@@ -1,0 +1,318 @@
+"""A scene's arrays, in memory or lazy: one pass to find the cut of the false discovery rule, then the flags."""
+
+from __future__ import annotations
+
+import os
+import tempfile
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass
+from typing import Any, TypeAlias
+
+import numpy as np
+import xarray as xr
+from numpy.typing import NDArray
+
+from ..detection.false_discovery import adjusted, adjusted_table, false_discovery_cut
+from ..detection.outside import BLOCK, Points, over_blocks
+from .decision import FLAG_MEANINGS, Decision
+from .materials import Materials
+from .sight import Sight, least_areal_fraction, reference_ground
+
+__all__ = ["Scene"]
+
+Floats: TypeAlias = NDArray[np.float64]
+
+_NAMES = {
+    "ratio": "red/infrared albedo ratio",
+    "outside_sigma": "distance outside the ice-free hull in standard deviations",
+    "p_value": "probability that ice-free ground lies as far outside",
+    "q_value": "least false discovery rate at which this is a candidate",
+    "fraction_lower": "lower bound of the areal fraction of ice",
+    "fraction_upper": "upper bound of the areal fraction of ice",
+    "flag": "ice flag",
+}
+_DTYPES = {name: np.dtype(np.float32) for name in _NAMES} | {
+    "p_value": np.dtype(np.float64),
+    "q_value": np.dtype(np.float64),
+    "flag": np.dtype(np.int8),
+}
+_SPOOL_IN_MEMORY = 1 << 28  # bytes of p-values held in memory in a streamed pass, before they go to a file
+
+
+@dataclass(frozen=True, eq=False)
+class Scene:
+    """Albedos and errors of a scene, on common dimensions.
+
+    Parameters
+    ----------
+    arrays : dict
+        Each a scalar or an array of the scene's shape, numpy or dask.
+    template : DataArray
+        Red: dimensions and coordinates of the result.
+    gain_sigma : float
+        Uncertainty shared by all points, as a fraction of the infrared.
+    opposition_ratio : float
+        The red is divided by it.
+    """
+
+    arrays: dict[str, Any]
+    template: xr.DataArray
+    gain_sigma: float
+    opposition_ratio: float
+
+    @classmethod
+    def of(cls, values: Mapping[str, Any], *, gain_sigma: float, opposition_ratio: float) -> Scene:
+        """Bring arrays to common dimensions.
+
+        Raises
+        ------
+        ValueError
+            If shapes or coordinates differ, or the errors are those of nothing.
+        """
+        red = values["red"]
+        template = red if isinstance(red, xr.DataArray) else _labelled(red)
+        template = template.drop_vars(["wavelength", "fwhm"], errors="ignore")
+        arrays = {name: _fitted(name, value, template) for name, value in values.items()}
+        return cls(arrays, template, gain_sigma, opposition_ratio)
+
+    def points(self, arrays: Mapping[str, Any]) -> Points:
+        """Points of one block of the arrays."""
+        errors = {name: array for name, array in arrays.items() if name != "red"}
+        scale = self.opposition_ratio
+        errors["sigma_red"] = errors["sigma_red"] / scale
+        errors["covariance"] = errors["covariance"] / scale
+        infrared, sigma_red, sigma_infrared = (
+            errors.pop(name) for name in ("infrared", "sigma_red", "sigma_infrared")
+        )
+        return Points.of(
+            arrays["red"] / scale, infrared, sigma_red, sigma_infrared, gain_sigma=self.gain_sigma, **errors
+        )
+
+    def judged(self, decision: Decision, rate: float, dependence: Any) -> xr.Dataset:
+        """Flags and what leads to them; lazy where the arrays are."""
+        lazy = any(hasattr(array, "dask") for array in self.arrays.values())
+        judge = self._judged_lazily if lazy else self._judged_in_memory
+        results, cuts, noise = judge(decision, rate, dependence)
+        flags = xr.Dataset(
+            {
+                name: self.template.copy(data=data).rename(None).assign_attrs(_described(name))
+                for name, data in results.items()
+            }
+        )
+        flags.attrs = {"Conventions": "CF-1.11", "p_value_cut": cuts[1], **self._sight(decision, noise)}
+        return flags
+
+    def _judged_in_memory(self, decision: Decision, rate: float, dependence: Any) -> tuple[Any, Any, Any]:
+        shape = self.template.shape
+        flat = {name: np.ravel(array) if np.ndim(array) else array for name, array in self.arrays.items()}
+        size = self.template.size
+        outside, p, p_outer = (np.empty(size) for _ in range(3))
+
+        def block(first: int, last: int) -> Points:
+            return self.points(
+                {name: array[first:last] if np.ndim(array) else array for name, array in flat.items()}
+            )
+
+        def find(first: int, last: int) -> None:
+            outside[first:last], p[first:last], p_outer[first:last] = decision.p_values(block(first, last))
+
+        over_blocks(find, size)
+        cut_outer = false_discovery_cut(p_outer, rate, dependence)
+        filtered = np.where(p_outer <= cut_outer, 1.0, p)
+        cut = false_discovery_cut(filtered, rate, dependence)
+        results = {name: np.empty(size, dtype=dtype) for name, dtype in _DTYPES.items() if name != "q_value"}
+
+        def judge(first: int, last: int) -> None:
+            here = slice(first, last)
+            judged = decision.judged(
+                block(first, last), outside[here], p[here], p_outer[here], cut_outer, cut
+            )
+            for name, values in judged._asdict().items():
+                results[name][here] = values
+
+        over_blocks(judge, size)
+        results["q_value"] = adjusted(filtered, dependence)
+        shaped = {name: results[name].reshape(shape) for name in _NAMES}
+        return shaped, (cut_outer, cut), self._noise([_medians(flat)])
+
+    def _judged_lazily(self, decision: Decision, rate: float, dependence: Any) -> tuple[Any, Any, Any]:
+        import dask.array as da
+
+        names = list(self.arrays)
+        lazy = [name for name in names if np.ndim(self.arrays[name])]
+        chunked = [
+            array if hasattr(array, "dask") else da.from_array(array, chunks=self._chunks())
+            for array in (self.arrays[name] for name in lazy)
+        ]
+        _, chunked = da.core.unify_chunks(*(part for array in chunked for part in (array, range(array.ndim))))
+        scalars = {name: self.arrays[name] for name in names if name not in lazy}
+
+        def block(parts: tuple[NDArray, ...]) -> tuple[Points, dict[str, Any]]:
+            arrays = scalars | dict(zip(lazy, parts, strict=True))
+            return self.points(arrays), arrays
+
+        def tally(*parts: NDArray) -> tuple[Floats, int, Floats]:
+            points, arrays = block(parts)
+            _, p, p_outer = decision.p_values(points)
+            telling = (p < 1) | (p_outer <= rate)
+            told = np.column_stack([p[telling], p_outer[telling]])
+            return told, int(np.sum(~np.isnan(p) & ~telling)), _medians(arrays)
+
+        with tempfile.SpooledTemporaryFile(max_size=_SPOOL_IN_MEMORY) as spool:
+            silent, medians = 0, []
+            for told, others, typical in _computed(tally, chunked):
+                spool.write(told.tobytes())
+                silent += others
+                medians.append(typical)
+
+            def passed(outer_cut: float | None) -> Callable[[], Iterator[Floats]]:
+                def blocks() -> Iterator[Floats]:
+                    spool.seek(0)
+                    while data := spool.read(16 * BLOCK):
+                        p, p_outer = np.frombuffer(data).reshape(-1, 2).T
+                        yield p_outer if outer_cut is None else np.where(p_outer <= outer_cut, 1.0, p)
+                    for first in range(0, silent, BLOCK):
+                        yield np.ones(min(BLOCK, silent - first))
+
+                return blocks
+
+            cut_outer = false_discovery_cut(passed(None), rate, dependence)
+            cut = false_discovery_cut(passed(cut_outer), rate, dependence)
+            table = adjusted_table(passed(cut_outer), dependence)
+
+        def finish(*parts: NDArray) -> NDArray[np.float64]:
+            points, _ = block(parts)
+            judged = decision.judged(points, *decision.p_values(points), cut_outer, cut)._asdict()
+            q = table(judged["p_value"])
+            # the table's values are up to 0.2 % too large: keep them on the side that the decision was on
+            judged["q_value"] = np.where(judged["p_value"] <= cut, np.minimum(q, rate), q)
+            return np.stack([judged[name] for name in _NAMES]).reshape(len(_NAMES), *parts[0].shape)
+
+        stacked = da.map_blocks(
+            finish, *chunked, dtype=np.float64, new_axis=0, chunks=((len(_NAMES),), *chunked[0].chunks),
+            meta=np.empty((0,) * (chunked[0].ndim + 1)),
+        )  # fmt: skip
+        results = {name: stacked[i].astype(_DTYPES[name]) for i, name in enumerate(_NAMES)}
+        return results, (cut_outer, cut), self._noise(medians)
+
+    def _chunks(self) -> Any:
+        return next(array.chunks for array in self.arrays.values() if hasattr(array, "dask"))
+
+    def _noise(self, medians: list[Floats]) -> dict[str, float]:
+        """Typical errors and incidence of the scene."""
+        table = np.array(medians)
+        typical = {}
+        for column, name in enumerate(_TYPICAL):
+            known = table[~np.isnan(table[:, column]), column]
+            typical[name] = float(np.median(known)) if known.size else np.nan
+        return typical
+
+    def _sight(self, decision: Decision, typical: dict[str, float]) -> dict[str, Any]:
+        ground = decision.ground
+        if not isinstance(ground, Materials):
+            return {
+                "ice_free": f"one ratio, {ground:g}",
+                "ice": "not used with a lone ratio",
+                "least_areal_ice": np.nan,
+                "least_areal_ice_meaning": "not known where one ratio is all that is known of the ground",
+            }
+        incidence = typical.pop("incidence_deg")
+        at = None if np.isnan(incidence) else incidence
+        index = reference_ground(ground)
+        ices = decision.ice.reflectance(at)
+        coarsest = int(np.argmax(ices[:, 0] / ices[:, 1]))
+        scale = self.opposition_ratio
+        fraction = np.nan
+        if not np.isnan(typical["sigma_red"] + typical["sigma_infrared"]):
+            typical["sigma_red"] /= scale
+            fraction = float(
+                least_areal_fraction(
+                    decision.hulls, ground.reflectance(at)[index], ices[coarsest], **typical,
+                    gain_sigma=self.gain_sigma, incidence_deg=incidence,
+                )
+            )  # fmt: skip
+        sight = Sight(fraction, ground.names[index], decision.ice.names[coarsest])
+        return {
+            "ice_free": ground.summary,
+            "ice": decision.ice.summary,
+            "least_areal_ice": fraction,
+            "least_areal_ice_meaning": sight.sentence,
+        }
+
+
+_TYPICAL = ("sigma_red", "sigma_infrared", "relative_red", "relative_infrared", "incidence_deg")
+
+
+def _medians(arrays: Mapping[str, Any]) -> Floats:
+    """Median of the errors and of the incidence, of at most some thousand points spread over the block."""
+    medians = []
+    for name in _TYPICAL:
+        values = np.ravel(arrays[name])
+        values = values[:: max(1, values.size // 10_000)]
+        known = values[~np.isnan(values)]
+        medians.append(np.median(known) if known.size else np.nan)
+    return np.array(medians)
+
+
+def _computed(work: Callable[..., Any], arrays: list[Any]) -> Iterator[Any]:
+    """Results of `work` on every block, a few blocks at a time."""
+    import dask
+
+    blocks = zip(*(array.to_delayed().ravel() for array in arrays), strict=True)
+    task = dask.delayed(work, pure=False)  # type: ignore[attr-defined]
+    tasks = [task(*parts) for parts in blocks]
+    at_once = 4 * len(os.sched_getaffinity(0))
+    for first in range(0, len(tasks), at_once):
+        yield from dask.compute(*tasks[first : first + at_once])  # type: ignore[attr-defined,no-untyped-call]
+
+
+def _labelled(values: Any) -> xr.DataArray:
+    array = values if hasattr(values, "dask") else np.asarray(values, dtype=float)
+    dims = {0: (), 1: ("shot",), 2: ("y", "x")}.get(array.ndim, tuple(f"dim_{i}" for i in range(array.ndim)))
+    return xr.DataArray(array, dims=dims)
+
+
+def _fitted(name: str, value: Any, template: xr.DataArray) -> Any:
+    """A scalar, or an array of the template's shape."""
+    if isinstance(value, xr.DataArray):
+        strange = [str(dim) for dim in value.dims if dim not in template.dims]
+        if strange:
+            raise ValueError(
+                f"{name} has the dimension {', '.join(strange)}, which red has not; red has "
+                f"{', '.join(map(str, template.dims)) or 'none'}"
+            )
+        plain = value.reset_coords(drop=True)
+        bare = template.reset_coords(drop=True)
+        try:
+            plain, bare = xr.align(plain, bare, join="exact", copy=False)
+        except ValueError:
+            sizes = ", ".join(f"{dim}: {size}" for dim, size in value.sizes.items())
+            raise ValueError(
+                f"{name} does not lie on red's coordinates (it has {sizes}); put both on one grid first"
+            ) from None
+        return _number(name, plain.broadcast_like(bare).transpose(*template.dims).data)
+    array = value if hasattr(value, "dask") else np.asarray(value)
+    if array.ndim and array.shape != template.shape:
+        try:
+            array = np.broadcast_to(array, template.shape)
+        except ValueError:
+            raise ValueError(
+                f"{name} must be one number or have the shape of red, {template.shape}, got {array.shape}"
+            ) from None
+    return _number(name, array)
+
+
+def _number(name: str, array: Any) -> Any:
+    if array.dtype.kind not in "fiu":
+        raise TypeError(f"{name} must be real numbers, got {array.dtype}")
+    return array
+
+
+def _described(name: str) -> dict[str, Any]:
+    if name == "flag":
+        return {
+            "long_name": _NAMES[name],
+            "flag_values": np.arange(len(FLAG_MEANINGS), dtype=np.int8),
+            "flag_meanings": " ".join(FLAG_MEANINGS),
+        }
+    return {"long_name": _NAMES[name], "units": "1"}
