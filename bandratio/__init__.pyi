@@ -5,9 +5,19 @@ from .cube import as_cube
 from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold, thresholds
 from .files import open_cube
+from .lidar import (
+    LidarCalibration,
+    LidarChannel,
+    albedo_from_returns,
+    as_returns,
+    calibrate_lidar,
+    flag_arguments,
+    lidar_ratio,
+)
 from .maps import parameters
 from .materials import material_table
 from .noise import Noise
+from .planning import compare_filter_sets, rank_bands
 from .ratio import BandRatio
 from .spectra import band_average, effective_wavelength, open_library, reference_spectra
 
