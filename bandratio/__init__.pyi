@@ -5,6 +5,7 @@ from .cube import as_cube
 from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold, thresholds
 from .files import open_cube
+from .ice import ice_flags
 from .lidar import (
     LidarCalibration,
     LidarChannel,
