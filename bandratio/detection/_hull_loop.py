@@ -212,6 +212,15 @@ def outer_loop(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def true_at_most(measured: float, variance: float, scaled: float, z: float) -> float:
+    """Return the largest true value that lies within z sigma of a measured one, its scaled error its own."""
+    shrink = max(
+        1 - z * math.sqrt(scaled), 0.1
+    )  # beyond 90 % of the value in z sigma there is no bound: ten times
+    return max(measured + z * math.sqrt(variance), 0.0) / shrink
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def bounds_loop(
     red: Floats,
     infrared: Floats,
@@ -241,8 +250,8 @@ def bounds_loop(
     `ice_starts[bin]` to `ice_starts[bin + 1]`, its edges the columns 0 to its number of edges. The infrared albedo of
     a dropout is anywhere between 0 and the one given; only edges that face ice speak for ice there.
     """
-    excess = np.empty(np.max(starts[1:] - starts[:-1]))
-    at_zero = np.empty(excess.size)
+    widest = np.max(starts[1:] - starts[:-1])
+    for_lower, for_upper = np.empty(widest), np.empty(widest)
     for i in range(red.size):
         a, b = red[i], infrared[i]
         vc = covariance[i]
@@ -252,25 +261,24 @@ def bounds_loop(
             continue
         first, last = starts[bins[i]], starts[bins[i] + 1]
         edges = last - first
-        # How high the infrared albedo may truly be: scaled errors are those of the true value, not of a low reading
-        scaled = math.sqrt(scaled_infrared[i])
-        high = max(b, 0.0)
+        # Scaled errors are those of the true albedo, which may be higher than a low reading; the infrared of ground
+        # with some ice is at most the hull's.
+        highest_red = true_at_most(a, var_red[i], scaled_red[i], z)
+        highest_infrared = true_at_most(b, var_infrared[i], scaled_infrared[i], z)
         if facing_starts[bins[i] + 1] > facing_starts[bins[i]]:
             edge = facing_edge(a, facing_starts[bins[i]], facing_starts[bins[i] + 1], knots)
-            null_infrared = slopes[edge] * a + intercepts[edge]
-            if b < null_infrared:
-                high = null_infrared
-                if z * scaled < 1:
-                    high = min(high, max(b + z * math.sqrt(var_infrared[i]), 0.0) / (1 - z * scaled))
+            highest_infrared = min(highest_infrared, max(b, slopes[edge] * a + intercepts[edge]))
         va = var_red[i] + scaled_red[i] * a * a
-        vb = var_infrared[i] + scaled_infrared[i] * high * high
+        va_high = var_red[i] + scaled_red[i] * highest_red * highest_red
+        vb = var_infrared[i] + scaled_infrared[i] * highest_infrared * highest_infrared
         for k in range(edges):
             m0, m1 = normals[first + k, 0], normals[first + k, 1]
-            margin = z * math.sqrt(max(m0 * m0 * va + 2 * m0 * m1 * vc + m1 * m1 * vb, 0.0))
-            excess[k] = m0 * a + m1 * b + offsets[first + k] - margin
-            at_zero[k] = excess[k]
+            others = 2 * m0 * m1 * vc + m1 * m1 * vb
+            beyond = m0 * a + m1 * b + offsets[first + k]
             if dropout[i]:
-                at_zero[k] = excess[k] - m1 * b
+                beyond -= max(m1 * b, 0.0)  # the infrared between 0 and b that speaks least for either bound
+            for_lower[k] = beyond - z * math.sqrt(max(m0 * m0 * va + others, 0.0))
+            for_upper[k] = beyond - z * math.sqrt(max(m0 * m0 * va_high + others, 0.0))
         least, most, least_of_any, most_of_any = 1.0, 0.0, 1.0, 0.0
         possible = False
         for j in range(ice_starts[bins[i]], ice_starts[bins[i] + 1]):
@@ -278,9 +286,9 @@ def bounds_loop(
             for k in range(edges):
                 per = per_excess[j, k]
                 if per > 0 and not (dropout[i] and normals[first + k, 1] >= 0):
-                    low = max(low, min(excess[k], at_zero[k]) * per)
+                    low = max(low, for_lower[k] * per)
                 elif per < 0:
-                    top = min(top, min(excess[k], at_zero[k]) * per)
+                    top = min(top, for_upper[k] * per)
             if low <= top:  # else no fraction of this ice leads there
                 possible = True
                 least = min(least, low)
