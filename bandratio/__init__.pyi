@@ -19,6 +19,21 @@ from .maps import parameters
 from .materials import material_table
 from .noise import Noise
 from .planning import compare_filter_sets, rank_bands
+from .photometry import (
+    Akimov,
+    ExponentialPhase,
+    Hapke,
+    Lambert,
+    LommelSeeliger,
+    LunarLambert,
+    Minnaert,
+    TabulatedPhase,
+    convert_quantity,
+    masked_pixels,
+    normalise,
+    require_quantity,
+)
+from .plots import plot_composite, plot_histogram, plot_map, plot_scatter
 from .ratio import BandRatio
 from .spectra import band_average, effective_wavelength, open_library, reference_spectra
 
