@@ -1,0 +1,26 @@
+"""Reflectance quantities, and photometric normalisation to one geometry."""
+
+from .angles import Geometry
+from .hapke import Hapke
+from .laws import Akimov, Lambert, Law, LommelSeeliger, LunarLambert, Minnaert
+from .normalise import masked_pixels, normalise
+from .phase import ExponentialPhase, PhaseFunction, TabulatedPhase
+from .quantities import convert_quantity, require_quantity
+
+__all__ = [
+    "Akimov",
+    "ExponentialPhase",
+    "Geometry",
+    "Hapke",
+    "Lambert",
+    "Law",
+    "LommelSeeliger",
+    "LunarLambert",
+    "Minnaert",
+    "PhaseFunction",
+    "TabulatedPhase",
+    "convert_quantity",
+    "masked_pixels",
+    "normalise",
+    "require_quantity",
+]

@@ -1,0 +1,184 @@
+"""Running a correction over a whole cube: in memory with threads, or lazily block by block."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from concurrent.futures import ThreadPoolExecutor
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from numpy.typing import NDArray
+
+from .correction import SLACK_DEG, Correction
+from .hapke import Hapke
+from .laws import MCEWEN_1996, Lambert, Law, LunarLambert
+
+__all__ = ["at_once", "lazily"]
+
+#: Pixels at a time for laws that are computed plane by plane: the planes stay in the processor's cache.
+_BLOCK_PIXELS = 32_768
+#: Below this many pixels a second thread costs more than it brings.
+_THREAD_PIXELS = 65_536
+
+
+def at_once(
+    cube: xr.DataArray, planes: Mapping[str, xr.DataArray], correction: Correction
+) -> tuple[NDArray, NDArray, NDArray]:
+    """Normalised values, flags and relative sigma of a cube in memory, on every core.
+
+    Parameters
+    ----------
+    cube : DataArray, dimensions (wavelength, …)
+        Reflectances.
+    planes : mapping of str to DataArray
+        ``incidence``, ``emission``, ``phase`` [deg], and where there are any ``shadow`` and ``slope_sigma`` [deg]; scalar
+        or with the cube's other dimensions.
+    correction : Correction
+        What to do.
+    """
+    from ..kernel import cores
+
+    return _run(cube.values, {name: plane.values for name, plane in planes.items()}, correction, cores())
+
+
+def lazily(
+    cube: xr.DataArray, planes: Mapping[str, xr.DataArray], correction: Correction
+) -> tuple[Any, Any, Any]:
+    """The same as dask arrays; the geometry may be lazy too."""
+    import dask.array as da
+
+    data = cube.chunk({} if cube.chunks is None else {"wavelength": -1}).data.rechunk({0: -1})
+    shape, chunks = data.shape[1:], data.chunks[1:]
+    spread_out = []
+    for plane in planes.values():
+        whole = plane.data if hasattr(plane.data, "dask") else da.from_array(plane.values, chunks=-1)
+        spread_out.append(
+            da.broadcast_to(whole, shape, chunks=chunks) if whole.ndim == 0 else whole.rechunk(chunks)
+        )
+    pixel = "abcdefg"[: len(shape)]
+    pairs = [item for plane in spread_out for item in (plane, pixel)]
+    common: dict[str, Any] = {"correction": correction, "names": tuple(planes), "concatenate": True}
+
+    def lazy_plane(part: str, dtype: Any) -> Any:
+        # values are needed for the flags only where the law itself can refuse them
+        if part == "flag" and isinstance(correction.laws[0], Hapke):
+            return da.blockwise(_part, pixel, data, "z" + pixel, *pairs, part=part, dtype=dtype, **common)
+        return da.blockwise(_part_of_geometry, pixel, *pairs, part=part, dtype=dtype, **common)
+
+    index = "z" + pixel
+    values = da.blockwise(_part, index, data, index, *pairs, part="values", dtype=data.dtype, **common)
+    gain = lazy_plane("gain", np.float32) if correction.has_sigma else None
+    return values, lazy_plane("flag", np.int8), gain
+
+
+def _part(
+    values: NDArray, *planes: NDArray, correction: Correction, names: tuple[str, ...], part: str
+) -> NDArray:
+    out, flag, _ = _run(values, dict(zip(names, planes, strict=True)), correction, sigma=False)
+    return flag if part == "flag" else out
+
+
+def _part_of_geometry(*planes: NDArray, correction: Correction, names: tuple[str, ...], part: str) -> NDArray:
+    none = np.empty((0, *planes[0].shape), dtype=np.float32)
+    _, flag, gain = _run(none, dict(zip(names, planes, strict=True)), correction, sigma=part == "gain")
+    return flag if part == "flag" else gain
+
+
+def _run(
+    values: NDArray,
+    planes: Mapping[str, NDArray],
+    correction: Correction,
+    threads: int = 1,
+    *,
+    sigma: bool = True,
+) -> tuple[NDArray, NDArray, NDArray]:
+    """Arrays of a cube or of one block of it; no bands in `values`: flags and sigma only."""
+    shape = values.shape[1:]
+    bands, pixels = values.shape[0], math.prod(shape)
+    flat = np.ascontiguousarray(values).reshape(bands, pixels)
+    whole = {name: np.broadcast_to(plane, shape).reshape(-1) for name, plane in planes.items()}
+    out = np.empty((bands, pixels), dtype=values.dtype)
+    flag = np.empty(pixels, dtype=np.int8)
+    sigma = sigma and correction.has_sigma
+    gain = np.empty(pixels if sigma else 0, dtype=np.float32)
+    do = _compiled if correction.mixed_only else _plane_by_plane
+    threads = max(1, min(threads, pixels // _THREAD_PIXELS))
+    stretch = _BLOCK_PIXELS if do is _plane_by_plane else -(-pixels // (1 if threads == 1 else 8 * threads))
+    stretches = [slice(start, min(start + stretch, pixels)) for start in range(0, pixels, max(1, stretch))]
+
+    def one(stretch: slice) -> None:
+        cut = {name: np.ascontiguousarray(plane[stretch]) for name, plane in whole.items()}
+        do(correction, flat, cut, out, flag, gain, stretch)
+
+    if threads == 1:
+        for each in stretches:
+            one(each)
+    else:
+        with ThreadPoolExecutor(threads) as pool:
+            list(pool.map(one, stretches))
+    return out.reshape(values.shape), flag.reshape(shape), gain.reshape(shape if sigma else (0,))
+
+
+def _plane_by_plane(
+    correction: Correction,
+    values: NDArray,
+    planes: dict[str, NDArray],
+    out: NDArray,
+    flag: NDArray,
+    gain: NDArray,
+    stretch: slice,
+) -> None:
+    angles = (planes["incidence"], planes["emission"], planes["phase"])
+    marked = correction.flags(*angles, planes.get("shadow"))
+    if values.shape[0]:
+        correction.apply(values[:, stretch], *angles, marked, out[:, stretch])
+    flag[stretch] = marked
+    if gain.size:
+        gain[stretch] = correction.sigma(*angles, marked, planes.get("slope_sigma"))
+
+
+def _compiled(
+    correction: Correction,
+    values: NDArray,
+    planes: dict[str, NDArray],
+    out: NDArray,
+    flag: NDArray,
+    gain: NDArray,
+    stretch: slice,
+) -> None:
+    from .disk_loop import mixed_law_loop
+
+    angles = [planes[name].astype(values.dtype, copy=False) for name in ("incidence", "emission", "phase")]
+    slope_deg = np.asarray(planes.get("slope_sigma", correction.slope_sigma_deg), dtype=float).reshape(-1)
+    largest = [math.degrees(math.acos(least)) for least in (correction.least_mu0, correction.least_mu)]
+    numbers = [
+        1 / correction.target.mu0 if correction.per_mu0 else 0.0,
+        *largest,
+        SLACK_DEG,
+        float(gain.size > 0),
+    ]
+    laws, spread, target = correction.laws, correction.spread, correction.target
+    mixed_law_loop(
+        values,
+        *angles,
+        planes.get("shadow", np.empty(0)).astype(np.uint8, copy=False),
+        np.array([_coefficients(law) for law in laws]),
+        np.array([law.at(target) for law in laws]),
+        np.array([_coefficients(law) for law in spread], dtype=float).reshape(-1, 4),
+        np.array([law.at(target) for law in spread], dtype=float),
+        np.deg2rad(slope_deg),
+        np.array(numbers, dtype=float),
+        out,
+        gain,
+        flag,
+        stretch.start,
+    )
+
+
+def _coefficients(law: Law) -> tuple[float, float, float, float]:
+    """L(g) as a cubic."""
+    if isinstance(law, LunarLambert):
+        return MCEWEN_1996 if law.L is None else (float(law.L), 0.0, 0.0, 0.0)
+    return (0.0, 0.0, 0.0, 0.0) if isinstance(law, Lambert) else (1.0, 0.0, 0.0, 0.0)
