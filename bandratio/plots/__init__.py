@@ -1,0 +1,8 @@
+"""Pictures: maps, scatters, composites and histograms, each on matplotlib axes."""
+
+from .composite import plot_composite
+from .histogram import plot_histogram
+from .maps import plot_map
+from .scatter import plot_scatter
+
+__all__ = ["plot_composite", "plot_histogram", "plot_map", "plot_scatter"]
