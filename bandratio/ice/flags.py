@@ -147,7 +147,10 @@ def ice_flags(
     shared = float(
         np.hypot(non_negative("gain_sigma", gain_sigma), non_negative("ice_free_sigma", ice_free_sigma))
     )
-    wavelengths = _laser("red", red, red_nm, RED_NM), _laser("infrared", infrared, infrared_nm, INFRARED_NM)
+    wavelengths = (
+        laser_wavelength("red", red, red_nm, RED_NM),
+        laser_wavelength("infrared", infrared, infrared_nm, INFRARED_NM),
+    )
     decision = Decision(
         ground=(
             ice_free_ground(ice_free, wavelengths)
@@ -192,7 +195,8 @@ def ice_flags(
     return flags
 
 
-def _laser(name: str, values: Any, given: float | None, usual: float) -> float:
+def laser_wavelength(name: str, values: Any, given: float | None, usual: float) -> float:
+    """Wavelength [nm]: the given one, the array's own, or the usual one; refuses quantities that are no albedo."""
     if isinstance(values, xr.DataArray):
         quantity = str(values.coords["quantity"].item()) if "quantity" in values.coords else ""
         if quantity and quantity not in ("reflectance_factor", "zero_phase_albedo"):

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import tempfile
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, TypeAlias
 
@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from ..detection.false_discovery import adjusted, adjusted_table, false_discovery_cut
 from ..detection.outside import BLOCK, Points, over_blocks
-from .decision import FLAG_MEANINGS, Decision
+from .decision import FLAG_MEANINGS, Decision, Judged
 from .materials import Materials
 from .sight import Sight, least_areal_fraction, reference_ground
 
@@ -102,65 +102,100 @@ class Scene:
         flags.attrs = {"Conventions": "CF-1.11", "p_value_cut": cuts[1], **self._sight(decision, noise)}
         return flags
 
+    def mapped(
+        self, work: Callable[[Points], Any], names: Sequence[str], dtypes: Mapping[str, Any]
+    ) -> dict[str, Any]:
+        """Arrays of the scene's shape from a function of points that gives one row for each name."""
+        chunked = self._chunked()
+        if not chunked:
+            size = self.template.size
+            results = {name: np.empty(size, dtype=dtypes[name]) for name in names}
+
+            def fill(first: int, last: int) -> None:
+                for name, row in zip(names, work(self._block(first, last)), strict=True):
+                    results[name][first:last] = row
+
+            over_blocks(fill, size)
+            return {name: values.reshape(self.template.shape) for name, values in results.items()}
+        import dask.array as da
+
+        def rows(*parts: NDArray) -> NDArray[np.float64]:
+            return np.stack(work(self._from_parts(parts))).reshape(len(names), *parts[0].shape)
+
+        stacked = da.map_blocks(
+            rows, *chunked, dtype=np.float64, new_axis=0, chunks=((len(names),), *chunked[0].chunks),
+            meta=np.empty((0,) * (chunked[0].ndim + 1)),
+        )  # fmt: skip
+        return {name: stacked[i].astype(dtypes[name]) for i, name in enumerate(names)}
+
+    def _block(self, first: int, last: int) -> Points:
+        return self.points(
+            {
+                name: np.ravel(array)[first:last] if np.ndim(array) else array
+                for name, array in self.arrays.items()
+            }
+        )
+
+    def _from_parts(self, parts: tuple[NDArray, ...]) -> Points:
+        full = [name for name, array in self.arrays.items() if np.ndim(array)]
+        return self.points(self.arrays | dict(zip(full, parts, strict=True)))
+
+    def _chunked(self) -> list[Any]:
+        """The arrays that are not scalars as dask arrays of common chunks; none where nothing is lazy."""
+        full = [array for array in self.arrays.values() if np.ndim(array)]
+        lazy = [array for array in full if hasattr(array, "dask")]
+        if not lazy:
+            return []
+        import dask.array as da
+
+        chunked = [
+            array if hasattr(array, "dask") else da.from_array(array, chunks=lazy[0].chunks) for array in full
+        ]
+        return list(
+            da.core.unify_chunks(*(part for array in chunked for part in (array, range(array.ndim))))[1]
+        )
+
     def _judged_in_memory(self, decision: Decision, rate: float, dependence: Any) -> tuple[Any, Any, Any]:
-        shape = self.template.shape
-        flat = {name: np.ravel(array) if np.ndim(array) else array for name, array in self.arrays.items()}
         size = self.template.size
         outside, p, p_outer = (np.empty(size) for _ in range(3))
 
-        def block(first: int, last: int) -> Points:
-            return self.points(
-                {name: array[first:last] if np.ndim(array) else array for name, array in flat.items()}
-            )
-
         def find(first: int, last: int) -> None:
-            outside[first:last], p[first:last], p_outer[first:last] = decision.p_values(block(first, last))
+            outside[first:last], p[first:last], p_outer[first:last] = decision.p_values(
+                self._block(first, last)
+            )
 
         over_blocks(find, size)
         cut_outer = false_discovery_cut(p_outer, rate, dependence)
         filtered = np.where(p_outer <= cut_outer, 1.0, p)
         cut = false_discovery_cut(filtered, rate, dependence)
-        results = {name: np.empty(size, dtype=dtype) for name, dtype in _DTYPES.items() if name != "q_value"}
+        results = {name: np.empty(size, dtype=_DTYPES[name]) for name in Judged._fields}
 
         def judge(first: int, last: int) -> None:
             here = slice(first, last)
             judged = decision.judged(
-                block(first, last), outside[here], p[here], p_outer[here], cut_outer, cut
+                self._block(first, last), outside[here], p[here], p_outer[here], cut_outer, cut
             )
             for name, values in judged._asdict().items():
                 results[name][here] = values
 
         over_blocks(judge, size)
         results["q_value"] = adjusted(filtered, dependence)
-        shaped = {name: results[name].reshape(shape) for name in _NAMES}
-        return shaped, (cut_outer, cut), self._noise([_medians(flat)])
+        shaped = {name: results[name].reshape(self.template.shape) for name in _NAMES}
+        return shaped, (cut_outer, cut), self._noise([_medians(self.arrays)])
 
     def _judged_lazily(self, decision: Decision, rate: float, dependence: Any) -> tuple[Any, Any, Any]:
-        import dask.array as da
-
-        names = list(self.arrays)
-        lazy = [name for name in names if np.ndim(self.arrays[name])]
-        chunked = [
-            array if hasattr(array, "dask") else da.from_array(array, chunks=self._chunks())
-            for array in (self.arrays[name] for name in lazy)
-        ]
-        _, chunked = da.core.unify_chunks(*(part for array in chunked for part in (array, range(array.ndim))))
-        scalars = {name: self.arrays[name] for name in names if name not in lazy}
-
-        def block(parts: tuple[NDArray, ...]) -> tuple[Points, dict[str, Any]]:
-            arrays = scalars | dict(zip(lazy, parts, strict=True))
-            return self.points(arrays), arrays
+        full = [name for name, array in self.arrays.items() if np.ndim(array)]
 
         def tally(*parts: NDArray) -> tuple[Floats, int, Floats]:
-            points, arrays = block(parts)
-            _, p, p_outer = decision.p_values(points)
+            _, p, p_outer = decision.p_values(self._from_parts(parts))
             telling = (p < 1) | (p_outer <= rate)
             told = np.column_stack([p[telling], p_outer[telling]])
-            return told, int(np.sum(~np.isnan(p) & ~telling)), _medians(arrays)
+            medians = _medians(self.arrays | dict(zip(full, parts, strict=True)))
+            return told, int(np.sum(~np.isnan(p) & ~telling)), medians
 
         with tempfile.SpooledTemporaryFile(max_size=_SPOOL_IN_MEMORY) as spool:
             silent, medians = 0, []
-            for told, others, typical in _computed(tally, chunked):
+            for told, others, typical in _computed(tally, self._chunked()):
                 spool.write(told.tobytes())
                 silent += others
                 medians.append(typical)
@@ -180,23 +215,14 @@ class Scene:
             cut = false_discovery_cut(passed(cut_outer), rate, dependence)
             table = adjusted_table(passed(cut_outer), dependence)
 
-        def finish(*parts: NDArray) -> NDArray[np.float64]:
-            points, _ = block(parts)
+        def finish(points: Points) -> list[NDArray]:
             judged = decision.judged(points, *decision.p_values(points), cut_outer, cut)._asdict()
             q = table(judged["p_value"])
             # the table's values are up to 0.2 % too large: keep them on the side that the decision was on
             judged["q_value"] = np.where(judged["p_value"] <= cut, np.minimum(q, rate), q)
-            return np.stack([judged[name] for name in _NAMES]).reshape(len(_NAMES), *parts[0].shape)
+            return [judged[name] for name in _NAMES]
 
-        stacked = da.map_blocks(
-            finish, *chunked, dtype=np.float64, new_axis=0, chunks=((len(_NAMES),), *chunked[0].chunks),
-            meta=np.empty((0,) * (chunked[0].ndim + 1)),
-        )  # fmt: skip
-        results = {name: stacked[i].astype(_DTYPES[name]) for i, name in enumerate(_NAMES)}
-        return results, (cut_outer, cut), self._noise(medians)
-
-    def _chunks(self) -> Any:
-        return next(array.chunks for array in self.arrays.values() if hasattr(array, "dask"))
+        return self.mapped(finish, tuple(_NAMES), _DTYPES), (cut_outer, cut), self._noise(medians)
 
     def _noise(self, medians: list[Floats]) -> dict[str, float]:
         """Typical errors and incidence of the scene."""
