@@ -343,7 +343,8 @@ def _covariances(
 ) -> tuple[xr.DataArray, xr.DataArray, xr.DataArray]:
     """Variances and covariance of two band ratios under every part of the noise.
 
-    ``cov(p, q) = Σ_j g_j h_j var_j + common_gain²·(Σ g_j R_j)(Σ h_j R_j)``, with g and h the two gradients.
+    ``cov(p, q) = Σ_j g_j h_j var_j + (common_gain² + pixel_gain²)·(Σ g_j R_j)(Σ h_j R_j)``, with g and h the two
+    gradients.
     """
     used: NDArray[np.bool_] = np.zeros(cube.sizes["wavelength"], dtype=bool)
     for ratio in (first, second):
@@ -357,7 +358,7 @@ def _covariances(
     along_g, along_h = ((each * R).sum("wavelength", skipna=False) for each in (g, h))
     if second.is_pure:
         along_h = xr.zeros_like(along_h)  # a common gain cancels exactly in a pure ratio
-    c2 = band.common_gain**2
+    c2 = band.common_gain**2 + band.pixel_gain**2
 
     def covariance(a: xr.DataArray, b: xr.DataArray, along: xr.DataArray) -> xr.DataArray:
         return (a * b * var).sum("wavelength", skipna=False) + c2 * along

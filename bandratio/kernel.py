@@ -104,6 +104,7 @@ def evaluate(
     noise: NoiseTable | None = None,
     *,
     random_map: NDArray | None = None,
+    pixel_gain: NDArray | None = None,
     parts: bool = False,
     threads: int = 1,
     out: NDArray | None = None,
@@ -120,6 +121,8 @@ def evaluate(
         None: values only.
     random_map : ndarray, shape (1 or band, pixel), optional
         Random noise of each pixel [reflectance], in place of the table's constant.
+    pixel_gain : ndarray, shape (pixel,), optional
+        Gain error common to the bands of a pixel, new in each pixel [1]; a random part.
     parts : bool
         Also give the random and the shared sigma.
     threads : int
@@ -140,6 +143,7 @@ def evaluate(
         noise = NoiseTable(np.zeros((reflectance.shape[0], 3)), np.zeros((reflectance.shape[0], 3)), 0.0)
     has_map = random_map is not None
     per_pixel = np.empty((1, 1), reflectance.dtype) if random_map is None else random_map
+    gain = np.empty(0, np.float32) if pixel_gain is None else pixel_gain
     fixed = (
         ratios.first, ratios.band, ratios.n, ratios.d, ratios.n0, ratios.d0, ratios.scale,
         noise.random, noise.shared, noise.common_gain,
@@ -149,7 +153,8 @@ def evaluate(
         # a copy of one stretch is cheap, of the whole cube it is not: strided input is copied here
         part = np.ascontiguousarray(reflectance[:, start:stop])
         part_map = np.ascontiguousarray(per_pixel[:, start:stop], dtype=part.dtype) if has_map else per_pixel
-        _loop(part, *fixed, has_map, part_map, out, start)
+        part_gain = np.ascontiguousarray(gain[start:stop])
+        _loop(part, *fixed, has_map, part_map, part_gain, out, start)
 
     threads = max(1, min(threads, pixels // _THREAD_PIXELS))
     if threads == 1 and reflectance.flags.c_contiguous:
@@ -178,6 +183,7 @@ def _loop(  # type: ignore[no-untyped-def]
     common_gain,
     has_map,
     random_map,
+    pixel_gain,
     out,
     offset,
 ):
@@ -201,7 +207,8 @@ def _loop(  # type: ignore[no-untyped-def]
         for k in range(scale.size):
             terms = slice(first[k], first[k + 1])
             along = common_gain if n0[k] != 0.0 or d0[k] != 0.0 else 0.0
-            if planes == 2 and first[k + 1] - first[k] <= 3:
+            gain = pixel_gain[start:stop] if n0[k] != 0.0 or d0[k] != 0.0 else pixel_gain[:0]
+            if planes == 2 and first[k + 1] - first[k] <= 3 and gain.size == 0:
                 _short_ratio(
                     reflectance, start, stop, var_random, band[terms], n[terms], d[terms], n0[k], d0[k], scale[k], along,
                     out[k, 0, here], out[k, 1, here],
@@ -209,7 +216,7 @@ def _loop(  # type: ignore[no-untyped-def]
             else:
                 _any_ratio(
                     reflectance, start, stop, var_random, var_shared, band[terms], n[terms], d[terms],
-                    n0[k], d0[k], scale[k], along, out[k], offset + start, scratch,
+                    n0[k], d0[k], scale[k], along, gain, out[k], offset + start, scratch,
                 )  # fmt: skip
 
 
@@ -267,7 +274,7 @@ def _short_ratio(  # type: ignore[no-untyped-def]
 
 @njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})
 def _any_ratio(  # type: ignore[no-untyped-def]
-    R, start, stop, var_random, var_shared, band, n, d, n0, d0, scale, along, out, to, scratch
+    R, start, stop, var_random, var_shared, band, n, d, n0, d0, scale, along, gain, out, to, scratch
 ):
     """Any number of terms, and the random and shared sigma apart."""
     upper, inverse, p, sum_random, sum_shared = scratch[0], scratch[1], scratch[2], scratch[3], scratch[4]
@@ -308,6 +315,10 @@ def _any_ratio(  # type: ignore[no-untyped-def]
         for i in range(m):
             common = along * (p[i] * d0 - scale * n0) * inverse[i]
             sum_shared[i] += common * common
+    if gain.size:
+        for i in range(m):
+            common = gain[i] * (p[i] * d0 - scale * n0) * inverse[i]
+            sum_random[i] += common * common
     for i in range(m):
         sigma[i] = np.sqrt(sum_random[i] + sum_shared[i])
     if planes == 4:

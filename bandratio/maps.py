@@ -150,7 +150,7 @@ def _planes(
     from .kernel import NoiseTable, RatioTable, cores
 
     table = RatioTable.build(ratios, centres, tolerance)
-    noises, random_map = None, None
+    noises, random_map, gain = None, None, None
     if noise is not None:
         band = noise.for_cube(cube, tolerance)
         noises = _noise_table(band, NoiseTable)
@@ -161,10 +161,23 @@ def _planes(
             )
             missing = {dim: cube.sizes[dim] for dim in dims if dim not in random_map.dims}
             random_map = random_map.expand_dims(missing).transpose("wavelength", *dims)
-    if is_lazy(cube) or (random_map is not None and is_lazy(random_map)):
-        return _lazy_planes(cube, table, noises, random_map, parts)
-    per_pixel = None if random_map is None else random_map.values
-    return _block(cube.values, per_pixel, table=table, noises=noises, parts=parts, threads=cores())
+        if isinstance(band.pixel_gain, xr.DataArray):
+            gain = band.pixel_gain.expand_dims("wavelength")
+    per_pixel = {
+        name: plane for name, plane in (("random_map", random_map), ("pixel_gain", gain)) if plane is not None
+    }
+    if is_lazy(cube) or any(is_lazy(plane) for plane in per_pixel.values()):
+        return _lazy_planes(cube, table, noises, per_pixel, parts)
+    in_memory = [plane.values for plane in per_pixel.values()]
+    return _block(
+        cube.values,
+        *in_memory,
+        names=tuple(per_pixel),
+        table=table,
+        noises=noises,
+        parts=parts,
+        threads=cores(),
+    )
 
 
 def _noise_table(band: BandNoise, build: type[NoiseTable]) -> NoiseTable:
@@ -183,7 +196,7 @@ def _lazy_planes(
     cube: xr.DataArray,
     table: RatioTable,
     noises: NoiseTable | None,
-    random_map: xr.DataArray | None,
+    per_pixel: Mapping[str, xr.DataArray],
     parts: bool,
 ) -> Any:
     import dask.array as da
@@ -192,13 +205,13 @@ def _lazy_planes(
     bands = cube.chunk({"wavelength": -1}).data
     planes = 1 if noises is None else 4 if parts else 2
     inputs = [bands]
-    if random_map is not None:
-        spatial = dict(zip(cube.dims[1:], bands.chunks[1:], strict=True))
-        inputs.append(random_map.chunk({"wavelength": -1, **spatial}).data)
+    spatial = dict(zip(cube.dims[1:], bands.chunks[1:], strict=True))
+    inputs += [plane.chunk({"wavelength": -1, **spatial}).data for plane in per_pixel.values()]
     # one task a block makes all planes; they are taken apart afterwards
     return da.map_blocks(
         _block,
         *inputs,
+        names=tuple(per_pixel),
         table=table,
         noises=noises,
         parts=parts,
@@ -212,8 +225,8 @@ def _lazy_planes(
 
 def _block(
     reflectance: NDArray,
-    random_map: NDArray | None = None,
-    *,
+    *per_pixel: NDArray,
+    names: tuple[str, ...] = (),
     table: RatioTable,
     noises: NoiseTable | None,
     parts: bool,
@@ -222,12 +235,17 @@ def _block(
     from .kernel import evaluate
 
     bands, shape = reflectance.shape[0], reflectance.shape[1:]
-    per_pixel = None if random_map is None else np.broadcast_to(random_map, (random_map.shape[0], *shape))
+    flat = {
+        name: np.broadcast_to(plane, (plane.shape[0], *shape)).reshape(plane.shape[0], -1)
+        for name, plane in zip(names, per_pixel, strict=True)
+    }
+    gain = flat.get("pixel_gain")
     planes = evaluate(
         reflectance.reshape(bands, -1),
         table,
         noises,
-        random_map=None if per_pixel is None else per_pixel.reshape(per_pixel.shape[0], -1),
+        random_map=flat.get("random_map"),
+        pixel_gain=None if gain is None else gain[0],
         parts=parts,
         threads=threads,
     )

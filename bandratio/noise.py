@@ -29,7 +29,9 @@ _FRACTIONS = ("relative", "band_gain", "common_gain")
 class BandNoise:
     """The parts of a `Noise` for the bands of one cube: DataArrays along `wavelength`.
 
-    `random` may have the cube's other dimensions too.
+    `random` may have the cube's other dimensions too. `pixel_gain` has them without `wavelength`, or is zero: the
+    cube's own coordinate of that name, a gain error common to the bands of a pixel and new in each pixel, which
+    `normalise` puts there.
     """
 
     random: xr.DataArray
@@ -38,6 +40,7 @@ class BandNoise:
     band_offset: xr.DataArray
     shot: xr.DataArray
     common_gain: float
+    pixel_gain: xr.DataArray | float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -57,6 +60,10 @@ class Noise:
     - `band_offset`: additive error of each band, a dark or stray-light residual [reflectance].
     - `common_gain`: one gain error for all bands, absolute radiometric accuracy [1]. It cancels exactly
       in a pure ratio of bands.
+
+    A third nature comes with the cube, not from here: the error of a photometric normalisation is common to the
+    bands of a pixel and new in each pixel. `normalise` leaves it on the cube as the coordinate `pixel_gain` [1]; like
+    `common_gain` it cancels in a pure ratio, and like `random` it averages away.
 
     **The classic mistake** is to enter a calibration report's "relative accuracy" as `relative`. It is one
     unknown number for each band, the same in every pixel: enter it as `band_gain`.
@@ -177,7 +184,10 @@ class Noise:
         }
         if self.random_is_map:
             parts["random"] = _map_for_cube(self.random, cube, centres, tolerance)
-        return BandNoise(**parts, common_gain=self.common_gain)
+        gain: xr.DataArray | float = 0.0
+        if "pixel_gain" in cube.coords:
+            gain = cube.coords["pixel_gain"].reset_coords(drop=True)
+        return BandNoise(**parts, common_gain=self.common_gain, pixel_gain=gain)
 
     @property
     def random_is_map(self) -> bool:

@@ -274,6 +274,7 @@ class BandRatio:
         if not self.is_pure:
             along = (g * R).isel(wavelength=used).sum("wavelength", skipna=False)
             shared = shared + (band.common_gain * along) ** 2
+            random = random + (band.pixel_gain * along) ** 2
         return random, shared
 
     def sigma(
