@@ -35,6 +35,8 @@ _RESAMPLES = 2000
 #: Pairs of specimens that are left out one after the other, at most.
 _LARGEST_PAIRS = 150
 _LARGEST_SUBSETS = 60_000
+#: How many of the best subsets get an interval of their area.
+_WITH_INTERVAL = 50
 #: Loss of area below which one band may stand for another (common practice, no source).
 _SAME_AREA = 0.005
 
@@ -68,7 +70,8 @@ class BandRanking:
     ----------
     subsets : DataFrame
         Every subset, best first: its bands [nm], cross-validated area under the ROC curve, the best single ratio with
-        its area; for the first ones the interval and whether it is told apart from the best.
+        its area; for the first 50 the interval; whether it is as good as the best: not told apart from it, or less than
+        0.005 behind.
     bands : DataFrame
         A row for each candidate: the best area with it and without it, and the band that may stand for it.
     optimism : float
@@ -264,21 +267,22 @@ def rank_bands(
     winners = drawn.argmax(axis=1)
     optimism = max(float((drawn[np.arange(len(winners)), winners] - area[winners]).mean()), 0.0)
     against_best = drawn[:, [order[0]]] - drawn
-    same = np.quantile(against_best, 0.025, axis=0) <= 0
+    same = (np.quantile(against_best, 0.025, axis=0) <= 0) | (area[order[0]] - area < _SAME_AREA)
+    limits = np.full((len(order), 2), np.nan)
+    for place, number in enumerate(order[:_WITH_INTERVAL]):
+        limits[place] = area_limits(drawn[:, number], float(area[number]), groups.counts)
     table = pd.DataFrame(
         {
             "bands": [tuple(float(centres[band]) for band in subsets[place]) for place in order],
             "area": area[order],
-            "lower": np.quantile(drawn, 0.025, axis=0)[order],
-            "upper": np.quantile(drawn, 0.975, axis=0)[order],
+            "lower": limits[:, 0],
+            "upper": limits[:, 1],
             "as_good_as_best": same[order],
             "best_ratio": [ratio_name(ratios[int(best[place])], centres) for place in order],
             "best_ratio_area": ratio_right.mean(axis=1)[order],
         },
         index=pd.RangeIndex(1, len(order) + 1, name="rank"),
     )
-    low, high = area_limits(drawn[:, order[0]], float(area[order[0]]), groups.counts)
-    table.loc[1, ["lower", "upper"]] = [low, high]
     bands = _band_table(centres, subsets, area, kept)
     findings = [
         f"the best of {len(order)} subsets was chosen on these specimens, which makes its area about {optimism:.3f} too good",
