@@ -4,7 +4,7 @@ from .composition import iron_oxide, optical_maturity, titanium_oxide
 from .cube import as_cube
 from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold, thresholds
-from .files import open_cube
+from .files import open_cube, open_maps, write_maps
 from .ice import ice_flags
 from .lidar import (
     LidarCalibration,
@@ -18,6 +18,7 @@ from .lidar import (
 from .maps import parameters
 from .materials import material_table
 from .noise import Noise
+from .noise_estimate import add_misregistration, estimate_noise
 from .planning import compare_filter_sets, rank_bands
 from .photometry import (
     Akimov,

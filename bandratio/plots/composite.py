@@ -78,7 +78,7 @@ def plot_composite(
 
 
 def _draw(ax: Axes, planes: list[xr.DataArray], limits: Sequence[tuple[float, float]] | None) -> None:
-    step = picture_step(planes[0].shape, PICTURE_PIXELS)  # type: ignore[arg-type]
+    step = picture_step(planes[0].shape, PICTURE_PIXELS)
     colour = np.ones((*picture_of(planes[0], step).shape, 3))
     missing = np.zeros(colour.shape[:2], dtype=bool)
     told = []

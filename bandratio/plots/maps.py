@@ -125,7 +125,7 @@ def _draw_values(ax: Axes, picture: xr.DataArray, grid: Grid) -> None:
     )
     bar = ax.figure.colorbar(image, ax=ax, extend=extend, fraction=0.05, pad=0.02)
     bar.set_label(_wrapped(labelled(picture)))
-    bar.outline.set_linewidth(0.6)  # type: ignore[operator]
+    bar.outline.set_linewidth(0.6)
 
 
 def _wrapped(text: str, width: int = 34) -> str:

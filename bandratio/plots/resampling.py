@@ -10,7 +10,7 @@ import xarray as xr
 __all__ = ["picture_of", "picture_step"]
 
 
-def picture_step(sizes: tuple[int, int], most_pixels: int) -> int:
+def picture_step(sizes: tuple[int, ...], most_pixels: int) -> int:
     """Side of the square of pixels that becomes one picture element, 1 where the map is small enough.
 
     Examples
