@@ -1,6 +1,13 @@
 """Open and write cubes and maps: any raster that GDAL reads, Zarr, netCDF; all or nothing, at any size."""
 
-from .atomic import beside
-from .cubes import open_cube
+import lazy_loader as _lazy
 
-__all__ = ["beside", "open_cube"]
+# numba, which counts the values of a map, is loaded only where maps are written
+__getattr__, __dir__, __all__ = _lazy.attach(
+    __name__,
+    submod_attrs={
+        "atomic": ["beside"],
+        "cubes": ["open_cube"],
+        "maps": ["open_maps", "write_and_count", "write_maps"],
+    },
+)
