@@ -4,7 +4,7 @@ from .composition import iron_oxide, optical_maturity, titanium_oxide
 from .cube import as_cube
 from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold, thresholds
-from .files import open_cube, open_maps, write_maps
+from .files import open_cube, open_maps, open_returns, write_maps
 from .ice import ice_flags
 from .lidar import (
     LidarCalibration,

@@ -9,5 +9,6 @@ __getattr__, __dir__, __all__ = _lazy.attach(
         "atomic": ["beside"],
         "cubes": ["open_cube"],
         "maps": ["open_maps", "write_and_count", "write_maps"],
+        "returns": ["open_returns"],
     },
 )

@@ -12,7 +12,7 @@ from .._checks import positive
 from .calibration import CHANNELS, LidarCalibration, LidarChannel
 from .equation import albedo_per_energy, return_variance
 from .returns import QUALITY, require_returns
-from .shots import check_units, incidence_of, net_energy, refuse_impossible, transmitted_of
+from .shots import check_units, incidence_of, net_energy, own_geometry, refuse_impossible, transmitted_of
 
 __all__ = [
     "albedo_from_returns",
@@ -100,18 +100,19 @@ def albedo_from_returns(
             "say so with returns.assign(range_m=…)"
         )
     incidence, known = incidence_of(returns, incidence_deg)
-    common = _common_relative(returns["range_m"], incidence, calibration)
     variables: dict[str, xr.DataArray] = {}
     for channel in CHANNELS:
-        variables |= _channel(
-            channel,
-            returns,
-            incidence,
-            common,
-            getattr(calibration, channel),
-            surge if channel == "red" else 1.0,
+        known_channel = getattr(calibration, channel)
+        distance, tilt = (
+            own_geometry(returns, name, channel, of_shot)
+            for name, of_shot in (("range_m", returns["range_m"]), ("incidence_deg", incidence))
         )
-    covariance = common**2 * variables["red"] * variables["infrared"]
+        common = _common_relative(distance, tilt, calibration)
+        surge_here = surge if channel == "red" else 1.0
+        variables |= _channel(channel, returns, distance, tilt, common, known_channel, surge_here)
+    # one pulse has one range and one incidence for both channels; two pulses have their own
+    moves_both = 0.0 if "range_m_infrared" in returns else common**2
+    covariance = moves_both * variables["red"] * variables["infrared"]
     variables["covariance"] = covariance.assign_attrs(
         long_name="random covariance of the red and the infrared albedo", units="1"
     )
@@ -145,7 +146,7 @@ def flag_arguments(albedos: xr.Dataset) -> dict[str, Any]:
     -------
     dict
         ``red``, ``infrared``, ``sigma_red``, ``sigma_infrared`` (the additive random part), ``relative_red``,
-        ``relative_infrared``, ``covariance``, ``gain_sigma``, ``infrared_limit``, and ``incidence_deg`` where known.
+        ``relative_infrared``, ``covariance``, ``gain_sigma``, ``infrared_limit``, ``incidence_deg`` (NaN: unknown).
 
     Examples
     --------
@@ -171,14 +172,15 @@ def flag_arguments(albedos: xr.Dataset) -> dict[str, Any]:
     for name in ("sigma_red", "sigma_infrared", "relative_red", "relative_infrared", "covariance"):
         arguments[name] = arguments[name].fillna(0)
     arguments["gain_sigma"] = float(albedos.attrs.get("gain_sigma", 0))
-    if "incidence_deg" in albedos:
-        arguments["incidence_deg"] = albedos["incidence_deg"]
+    # unknown incidence is not the laboratory's: NaN asks for the hull of every incidence
+    arguments["incidence_deg"] = albedos["incidence_deg"] if "incidence_deg" in albedos else np.nan
     return arguments
 
 
 def _channel(
     name: str,
     returns: xr.Dataset,
+    range_m: xr.DataArray,
     incidence: xr.DataArray,
     common: xr.DataArray,
     channel: LidarChannel,
@@ -193,7 +195,7 @@ def _channel(
         block,
         returns[name],
         returns[f"{name}_quality"],
-        returns["range_m"],
+        range_m,
         incidence,
         common,
         transmitted,

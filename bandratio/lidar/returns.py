@@ -18,12 +18,14 @@ QUALITY = {"good": 0, "dropout": 1, "saturated": 2, "missing": 3}
 #: What may be known about a shot besides its energies, with the unit it is kept in.
 SHOT_UNITS = {
     "x": "", "y": "", "z": "m", "time": "", "range_m": "m", "incidence_deg": "degree",
+    "range_m_infrared": "m", "incidence_deg_infrared": "degree",
     "transmitted_red": "energy", "transmitted_infrared": "energy",
     "background_red": "energy", "background_infrared": "energy",
     "sigma_red": "energy", "sigma_infrared": "energy",
 }  # fmt: skip
 _NAMES = {
     "x": "x", "y": "y", "z": "elevation", "time": "time", "range_m": "range", "incidence_deg": "incidence",
+    "range_m_infrared": "range of the infrared pulse", "incidence_deg_infrared": "incidence of the infrared pulse",
     "transmitted_red": "transmitted energy, red", "transmitted_infrared": "transmitted energy, infrared",
     "background_red": "background energy, red", "background_infrared": "background energy, infrared",
     "sigma_red": "random standard uncertainty of the red energy",
@@ -62,7 +64,8 @@ def as_returns(
         Map projection of `x` and `y`, in any form that rasterio takes.
     **shot : array_like, shape (shot,)
         What else is known about each shot: ``x``, ``y`` [unit of the projection], ``z`` [m], ``time``, ``range_m``
-        [m], ``incidence_deg`` [degree], and for each channel ``transmitted_…``, ``background_…``, ``sigma_…`` [unit
+        [m], ``incidence_deg`` [degree] (and ``…_infrared`` where that laser's pulse has its own), and for each channel
+        ``transmitted_…``, ``background_…``, ``sigma_…`` [unit
         of the energies].
 
     Returns
@@ -209,13 +212,13 @@ def _quality_attrs(channel: str) -> dict[str, Any]:
 def _refuse_impossible(name: str, array: Any) -> None:
     if hasattr(array, "dask"):  # looked at where it is used, in albedo_from_returns
         return
-    if name == "range_m" and (bad := array[array <= 0]).size:
+    if name.startswith("range_m") and (bad := array[array <= 0]).size:
         raise ValueError(
-            f"range_m must be positive, got {bad[0]:g} m at {bad.size} shots; NaN marks an unknown one"
+            f"{name} must be positive, got {bad[0]:g} m at {bad.size} shots; NaN marks an unknown one"
         )
-    if name == "incidence_deg" and (bad := array[(array < 0) | (array >= 90)]).size:
+    if name.startswith("incidence_deg") and (bad := array[(array < 0) | (array >= 90)]).size:
         raise ValueError(
-            f"incidence_deg must lie in [0, 90) degrees, got {bad[0]:g} at {bad.size} shots; a scan angle with a sign "
+            f"{name} must lie in [0, 90) degrees, got {bad[0]:g} at {bad.size} shots; a scan angle with a sign "
             "needs its absolute value"
         )
 

@@ -12,7 +12,7 @@ from .calibration import CHANNELS, LidarCalibration, LidarChannel
 from .equation import live_fraction
 from .returns import QUALITY
 
-__all__ = ["check_units", "incidence_of", "net_energy", "refuse_impossible", "transmitted_of"]
+__all__ = ["check_units", "incidence_of", "net_energy", "own_geometry", "refuse_impossible", "transmitted_of"]
 
 
 def transmitted_of(name: str, returns: xr.Dataset, channel: LidarChannel) -> xr.DataArray | float:
@@ -93,3 +93,9 @@ def refuse_impossible(range_m: NDArray, incidence: NDArray, transmitted: NDArray
         raise ValueError(
             f"transmitted_{name} must be positive, got {np.nanmin(transmitted):g}; NaN marks a shot where it is unknown"
         )
+
+
+def own_geometry(returns: xr.Dataset, name: str, channel: str, of_shot: xr.DataArray) -> xr.DataArray:
+    """The channel's own range or incidence where it has one, else the shot's."""
+    own: xr.DataArray | None = returns.get(f"{name}_{channel}")
+    return of_shot if own is None else own.fillna(of_shot)

@@ -14,7 +14,7 @@ from .._checks import non_negative, positive
 from .calibration import CHANNELS, LidarCalibration, LidarChannel
 from .equation import albedo_per_energy
 from .returns import QUALITY, require_returns
-from .shots import check_units, incidence_of, net_energy, transmitted_of
+from .shots import check_units, incidence_of, net_energy, own_geometry, transmitted_of
 
 __all__ = ["calibrate_lidar"]
 
@@ -149,7 +149,9 @@ def _energies(
     if net.size < 2:
         raise ValueError(f"a calibration needs two shots or more at the target, got {net.size}")
     transmitted = transmitted_of(name, returns, channel)
-    factor = albedo_per_energy(returns["range_m"].values, incidence.values, np.asarray(transmitted), 1.0)
+    distance = own_geometry(returns, "range_m", name, returns["range_m"])
+    tilt = own_geometry(returns, "incidence_deg", name, incidence)
+    factor = albedo_per_energy(distance.values, tilt.values, np.asarray(transmitted), 1.0)
     if not np.isfinite(factor).all() or (factor <= 0).any():
         raise ValueError(
             "range, incidence and transmitted energy of every shot at the target must be known and positive"
