@@ -158,6 +158,22 @@ def null_point(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def chain_height(red: float, first: int, last: int, chain: Floats) -> float:
+    """Return the infrared of a chain of corners, ordered by red, at a red albedo within it."""
+    low, high = first, last - 1
+    while high - low > 1:
+        middle = (low + high) // 2
+        if chain[middle, 0] <= red:
+            low = middle
+        else:
+            high = middle
+    width = chain[high, 0] - chain[low, 0]
+    share = (red - chain[low, 0]) / width if width > 0 else 0.0
+    height: float = chain[low, 1] + share * (chain[high, 1] - chain[low, 1])
+    return height
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def outer_loop(
     red: Floats,
     infrared: Floats,
@@ -172,6 +188,10 @@ def outer_loop(
     normals: Floats,
     offsets: Floats,
     corners: Floats,
+    lower_starts: Ints,
+    lower_chain: Floats,
+    upper_starts: Ints,
+    upper_chain: Floats,
     p_value: Floats,
 ) -> None:
     """Write exp(−d²/2), d the distance in sigma outside all edges; of a dropout the largest for any b in [0, b]."""
@@ -181,17 +201,16 @@ def outer_loop(
         if not (math.isfinite(a) and math.isfinite(b) and math.isfinite(var_red[i] + var_infrared[i] + vc)):
             p_value[i] = np.nan
             continue
-        first, last = starts[bins[i]], starts[bins[i] + 1]
-        inside = True
-        for edge in range(first, last):
-            if normals[edge, 0] * a + normals[edge, 1] * b + offsets[edge] > 0:
-                inside = False
-                break
         p_value[i] = 1.0
-        if inside:
-            continue
+        hull = bins[i]
+        if lower_chain[lower_starts[hull], 0] <= a <= corners[hull, 0]:
+            below = chain_height(a, lower_starts[hull], lower_starts[hull + 1], lower_chain)
+            above = chain_height(a, upper_starts[hull], upper_starts[hull + 1], upper_chain)
+            if below <= b <= above:
+                continue
+        first, last = starts[hull], starts[hull + 1]
         null_red, null_infrared = null_point(
-            a, b, first, last, normals, offsets, corners[bins[i], 0], corners[bins[i], 1]
+            a, b, first, last, normals, offsets, corners[hull, 0], corners[hull, 1]
         )
         va = var_red[i] + scaled_red[i] * null_red * null_red
         vb = var_infrared[i] + scaled_infrared[i] * null_infrared * null_infrared
@@ -209,131 +228,3 @@ def outer_loop(
                     low += third
         if d > 0:
             p_value[i] = math.exp(-0.5 * d * d)
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def true_at_most(measured: float, variance: float, scaled: float, z: float) -> float:
-    """Return the largest true value that lies within z sigma of a measured one, its scaled error its own."""
-    shrink = max(
-        1 - z * math.sqrt(scaled), 0.1
-    )  # beyond 90 % of the value in z sigma there is no bound: ten times
-    return max(measured + z * math.sqrt(variance), 0.0) / shrink
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def bounds_loop(
-    red: Floats,
-    infrared: Floats,
-    var_red: Floats,
-    var_infrared: Floats,
-    covariance: Floats,
-    scaled_red: Floats,
-    scaled_infrared: Floats,
-    dropout: Bools,
-    bins: Ints,
-    z: float,
-    starts: Ints,
-    normals: Floats,
-    offsets: Floats,
-    facing_starts: Ints,
-    slopes: Floats,
-    intercepts: Floats,
-    knots: Floats,
-    ice_starts: Ints,
-    per_excess: Floats,
-    lower: Floats,
-    upper: Floats,
-) -> None:
-    """Write the bounds of the areal fraction of ice, each one-sided at z sigma.
-
-    `per_excess[j, e]` is 1/(m·ice + c) of an ice material and an edge; the materials of a hull are the rows
-    `ice_starts[bin]` to `ice_starts[bin + 1]`, its edges the columns 0 to its number of edges. The infrared albedo of
-    a dropout is anywhere between 0 and the one given; only edges that face ice speak for ice there.
-    """
-    widest = np.max(starts[1:] - starts[:-1])
-    for_lower, for_upper = np.empty(widest), np.empty(widest)
-    for i in range(red.size):
-        a, b = red[i], infrared[i]
-        vc = covariance[i]
-        if not (math.isfinite(a) and math.isfinite(b) and math.isfinite(var_red[i] + var_infrared[i] + vc)):
-            lower[i] = np.nan
-            upper[i] = np.nan
-            continue
-        first, last = starts[bins[i]], starts[bins[i] + 1]
-        edges = last - first
-        # Scaled errors are those of the true albedo, which may be higher than a low reading; the infrared of ground
-        # with some ice is at most the hull's.
-        highest_red = true_at_most(a, var_red[i], scaled_red[i], z)
-        highest_infrared = true_at_most(b, var_infrared[i], scaled_infrared[i], z)
-        if facing_starts[bins[i] + 1] > facing_starts[bins[i]]:
-            edge = facing_edge(a, facing_starts[bins[i]], facing_starts[bins[i] + 1], knots)
-            highest_infrared = min(highest_infrared, max(b, slopes[edge] * a + intercepts[edge]))
-        va = var_red[i] + scaled_red[i] * a * a
-        va_high = var_red[i] + scaled_red[i] * highest_red * highest_red
-        vb = var_infrared[i] + scaled_infrared[i] * highest_infrared * highest_infrared
-        for k in range(edges):
-            m0, m1 = normals[first + k, 0], normals[first + k, 1]
-            others = 2 * m0 * m1 * vc + m1 * m1 * vb
-            beyond = m0 * a + m1 * b + offsets[first + k]
-            if dropout[i]:
-                beyond -= max(m1 * b, 0.0)  # the infrared between 0 and b that speaks least for either bound
-            for_lower[k] = beyond - z * math.sqrt(max(m0 * m0 * va + others, 0.0))
-            for_upper[k] = beyond - z * math.sqrt(max(m0 * m0 * va_high + others, 0.0))
-        least, most, least_of_any, most_of_any = 1.0, 0.0, 1.0, 0.0
-        possible = False
-        for j in range(ice_starts[bins[i]], ice_starts[bins[i] + 1]):
-            low, top = 0.0, 1.0
-            for k in range(edges):
-                per = per_excess[j, k]
-                if per > 0 and not (dropout[i] and normals[first + k, 1] >= 0):
-                    low = max(low, for_lower[k] * per)
-                elif per < 0:
-                    top = min(top, for_upper[k] * per)
-            if low <= top:  # else no fraction of this ice leads there
-                possible = True
-                least = min(least, low)
-                most = max(most, top)
-            least_of_any = min(least_of_any, low)
-            most_of_any = max(most_of_any, top)
-        if not possible:
-            least, most = least_of_any, most_of_any
-        lower[i] = min(max(least, 0.0), 1.0)
-        upper[i] = min(max(most, 0.0), 1.0)
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def opaque_loop(
-    red: Floats,
-    infrared: Floats,
-    var_red: Floats,
-    var_infrared: Floats,
-    covariance: Floats,
-    scaled_red: Floats,
-    scaled_infrared: Floats,
-    dropout: Bools,
-    z_red: float,
-    z_ratio: float,
-    darkest: float,
-    low: float,
-    high: float,
-    opaque: Bools,
-) -> None:
-    """Write whether red is surely below `darkest` and Fieller's interval of the ratio overlaps [low, high]."""
-    for i in range(red.size):
-        a, b = red[i], infrared[i]
-        va = var_red[i] + scaled_red[i] * a * a
-        vb = var_infrared[i] + scaled_infrared[i] * b * b
-        vc = covariance[i]
-        opaque[i] = False
-        if dropout[i] or not a + z_red * math.sqrt(va) < darkest:  # NaN fails too
-            continue
-        # the set of ratios is where this parabola in the ratio is not above zero
-        square = b * b - z_ratio * z_ratio * vb
-        half = a * b - z_ratio * z_ratio * vc
-        rest = a * a - z_ratio * z_ratio * va
-        at_low = (square * low - 2 * half) * low + rest
-        at_high = (square * high - 2 * half) * high + rest
-        lowest = min(at_low, at_high)
-        if square > 0 and low < half / square < high:
-            lowest = min(lowest, rest - half * half / square)
-        opaque[i] = lowest <= 0

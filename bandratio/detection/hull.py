@@ -86,6 +86,37 @@ class Hull:
         """How far outside each edge's line points lie (negative: inside), shape (point, edge)."""
         return np.asarray(points, dtype=float) @ self.normals.T + self.offsets
 
+    def chains(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Corners below and above, from the least red to the greatest; of a half-plane none."""
+        if not len(self.vertices):
+            return self.vertices, self.vertices
+        red, infrared = self.vertices.T
+        left, right = np.lexsort((infrared, red))[0], np.lexsort((infrared, -red))[0]
+        around = np.roll(self.vertices, -left, axis=0)  # counter-clockwise: first below, from left to right
+        turn = (right - left) % len(red)
+        return around[: turn + 1], np.vstack([around[turn:], around[:1]])[::-1]
+
+    def bounding_edges(self, angle: float = 0.01, length: float = 0.01) -> NDArray[np.int64]:
+        """Indices of edges that bound nearly the same set, within `angle`·`length`/4 of it, and contain it all.
+
+        A smooth curve is sampled more finely than bounds of a fraction need: runs of edges whose normals turn by
+        less than `angle` [radian] over less than `length` are spoken for by their ends.
+        """
+        count = len(self.offsets)
+        if count <= 4:
+            return np.arange(count)
+        sides = np.hypot(*(np.roll(self.vertices, -1, axis=0) - self.vertices).T)
+        directions = np.unwrap(np.arctan2(self.normals[:, 1], self.normals[:, 0]))
+        kept, run = [0], 0.0
+        for edge in range(1, count):
+            following = directions[edge + 1] if edge + 1 < count else np.inf
+            if following - directions[kept[-1]] > angle or run + sides[edge] > length:
+                kept.append(edge)
+                run = 0.0
+            else:
+                run += sides[edge]
+        return np.array(kept)
+
     def contains(self, points: ArrayLike, tolerance: float = 1e-9) -> NDArray[np.bool_]:
         """Whether points of shape (point, 2) lie inside."""
         return np.asarray((self.excess(points) <= tolerance).all(axis=-1))
@@ -222,6 +253,10 @@ class PackedHulls(NamedTuple):
     normals: NDArray[np.float64]
     offsets: NDArray[np.float64]
     corners: NDArray[np.float64]  # (hull, 2): greatest red, greatest infrared
+    lower_starts: NDArray[np.int64]  # the corners below and above, by rising red: the hull as two functions
+    lower_chain: NDArray[np.float64]
+    upper_starts: NDArray[np.int64]
+    upper_chain: NDArray[np.float64]
     facing_starts: NDArray[np.int64]
     slopes: NDArray[np.float64]
     intercepts: NDArray[np.float64]
@@ -250,11 +285,16 @@ class HullsByIncidence:
     @cached_property
     def packed(self) -> PackedHulls:
         """The edges of all hulls, one after another."""
+        chains = [hull.chains() for hull in self.hulls]
         return PackedHulls(
             starts=_starts(len(hull.offsets) for hull in self.hulls),
             normals=np.concatenate([hull.normals for hull in self.hulls]),
             offsets=np.concatenate([hull.offsets for hull in self.hulls]),
             corners=np.array([hull.vertices.max(axis=0, initial=0.0) for hull in self.hulls]),
+            lower_starts=_starts(len(lower) for lower, _ in chains),
+            lower_chain=np.concatenate([lower for lower, _ in chains]),
+            upper_starts=_starts(len(upper) for _, upper in chains),
+            upper_chain=np.concatenate([upper for _, upper in chains]),
             facing_starts=_starts(len(hull.slopes) for hull in self.hulls),
             slopes=np.concatenate([hull.slopes for hull in self.hulls]),
             intercepts=np.concatenate([hull.intercepts for hull in self.hulls]),

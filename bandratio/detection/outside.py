@@ -260,7 +260,8 @@ def outer_p_values(
         block = points.part(first, last)
         outer_loop(
             *block.measured(), block.dropout, hulls.bins(block.incidence_deg), packed.starts, packed.normals,
-            packed.offsets, packed.corners, p[first:last],
+            packed.offsets, packed.corners, packed.lower_starts, packed.lower_chain, packed.upper_starts,
+            packed.upper_chain, p[first:last],
         )  # fmt: skip
 
     over_blocks(work, len(points), threads)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from functools import cached_property
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -33,6 +33,17 @@ class Judged(NamedTuple):
     fraction_lower: NDArray[np.float32]
     fraction_upper: NDArray[np.float32]
     flag: NDArray[np.int8]
+
+
+class _Bounding(NamedTuple):
+    """Edges and ices as `bounds_loop` takes them."""
+
+    starts: NDArray[np.int64]
+    normals: NDArray[np.float64]
+    offsets: NDArray[np.float64]
+    ice_starts: NDArray[np.int64]
+    raising: NDArray[np.float64]
+    lowering: NDArray[np.float64]
 
 
 @dataclass(frozen=True, eq=False)
@@ -79,17 +90,26 @@ class Decision:
         return float(ndtri(self.confidence)), float(ndtri((1 + self.confidence) / 2))
 
     @cached_property
-    def _per_excess(self) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
-        """1/(m·ice + c) for the ices of each bin, seen at its ends and its middle."""
-        angles = [a.tolist() for a in bin_angles()] if self.by_incidence else [[None]]
-        widest = max(len(hull.offsets) for hull in self.hulls.hulls)
-        starts, rows = [0], []
-        for hull, seen_at in zip(self.hulls.hulls, angles, strict=True):
-            excess = hull.excess(np.concatenate([self.ice.reflectance(angle) for angle in seen_at]))
+    def _bounding(self) -> _Bounding:
+        """Edges of each hull, and 1/(m·ice + c) of them for the ices as seen at the ends and middle of its bin."""
+        angles: list[list[Any]] = [a.tolist() for a in bin_angles()] if self.by_incidence else [[None]]
+        edges = [hull.bounding_edges() for hull in self.hulls.hulls]
+        widest = max(map(len, edges))
+        ice_starts, rows = [0], []
+        for hull, kept, seen_at in zip(self.hulls.hulls, edges, angles, strict=True):
+            excess = hull.excess(np.concatenate([self.ice.reflectance(angle) for angle in seen_at]))[:, kept]
             per = np.divide(1.0, excess, out=np.zeros_like(excess), where=np.abs(excess) > 1e-9)
             rows.append(np.pad(per, ((0, 0), (0, widest - per.shape[1]))))
-            starts.append(starts[-1] + len(per))
-        return np.array(starts), np.concatenate(rows)
+            ice_starts.append(ice_starts[-1] + len(per))
+        per_excess = np.concatenate(rows)
+        return _Bounding(
+            np.concatenate([[0], np.cumsum([len(kept) for kept in edges])]),
+            np.concatenate([hull.normals[kept] for hull, kept in zip(self.hulls.hulls, edges, strict=True)]),
+            np.concatenate([hull.offsets[kept] for hull, kept in zip(self.hulls.hulls, edges, strict=True)]),
+            np.array(ice_starts),
+            np.maximum(per_excess, 0.0),
+            np.minimum(per_excess, 0.0),
+        )
 
     def p_values(
         self, points: Points
@@ -105,14 +125,14 @@ class Decision:
         missing = np.where(np.isnan(points.red + points.infrared), np.nan, 0.0)
         if self.outer is None:
             return missing, missing + 1
-        from ..detection._hull_loop import bounds_loop
+        from ._decision_loop import bounds_loop
 
-        hulls, (ice_starts, per_excess) = self.hulls.packed, self._per_excess
+        hulls, edges = self.hulls.packed, self._bounding
         lower, upper = np.empty(len(points)), np.empty(len(points))
         bounds_loop(
-            *points.measured(), points.dropout, self.hulls.bins(points.incidence_deg), self._z[0], hulls.starts,
-            hulls.normals, hulls.offsets, hulls.facing_starts, hulls.slopes, hulls.intercepts, hulls.knots, ice_starts,
-            per_excess, lower, upper,
+            *points.measured(), points.dropout, self.hulls.bins(points.incidence_deg), self._z[0], edges.starts,
+            edges.normals, edges.offsets, hulls.facing_starts, hulls.slopes, hulls.intercepts, hulls.knots,
+            edges.ice_starts, edges.raising, edges.lowering, lower, upper,
         )  # fmt: skip
         return lower, upper
 
@@ -120,7 +140,7 @@ class Decision:
         """Whether points are surely dark in the red, with a ratio that may be an opaque's (Fieller's interval)."""
         opaque = np.zeros(len(points), dtype=bool)
         if self.outer is not None:
-            from ..detection._hull_loop import opaque_loop
+            from ._decision_loop import opaque_loop
 
             opaque_loop(
                 *points.measured(), points.dropout, *self._z, OPAQUE_RED, *OPAQUE_RATIO, opaque,
