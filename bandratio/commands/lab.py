@@ -189,7 +189,7 @@ def _value_text(table: xr.Dataset, name: str, row: int) -> str:
 def _thresholds_text(found: dict[str, Threshold], table: xr.Dataset) -> str:
     """One line a threshold with what is said of it alone, then once what is said of all."""
     told = {name: each.separation for name, each in found.items() if each.separation is not None}
-    common = [f for f in dict.fromkeys(f for each in told.values() for f in each.findings)]
+    common = list(dict.fromkeys(f for each in told.values() for f in each.findings))
     common = [finding for finding in common if all(finding in each.findings for each in told.values())]
     lines = []
     for name, separation in told.items():

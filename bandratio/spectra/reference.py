@@ -70,7 +70,7 @@ def reference_spectra(
     if wavelengths is None and fwhm is None and responses is None:
         return table
     averaged = average_or_refuse(table, wavelengths, fwhm, responses)
-    missing = averaged.isnull()
+    missing = averaged.isnull().transpose("sample", "wavelength")
     nowhere = averaged["wavelength"].values[missing.all("sample").values]
     if nowhere.size:
         known = table["wavelength"].values
@@ -78,12 +78,18 @@ def reference_spectra(
             f"the reference table has no points for the band at {listed(nowhere.tolist(), 'nm')}; it reaches from "
             f"{known[0]:g} to {known[-1]:g} nm in steps of 10 to 50 nm"
         )
-    left_out = [
-        f"{band:g} nm: no value for {', '.join(averaged['sample'].values[missing.sel(wavelength=band).values])}"
-        for band in averaged["wavelength"].values[missing.any("sample").values]
-    ]
-    averaged.attrs["left_out"] = "; ".join(left_out)
+    averaged.attrs["left_out"] = _left_out(missing)
     return averaged
+
+
+def _left_out(missing: xr.DataArray) -> str:
+    """Which materials have no value, and at which bands: one clause for each list of bands."""
+    bands = missing["wavelength"].values
+    of_bands: dict[tuple[float, ...], list[str]] = {}
+    for sample, row in zip(missing["sample"].values, missing.values, strict=True):
+        if row.any():
+            of_bands.setdefault(tuple(bands[row].tolist()), []).append(str(sample))
+    return "; ".join(f"no value at {listed(at, 'nm')} for {listed(names)}" for at, names in of_bands.items())
 
 
 @lru_cache(maxsize=1)
