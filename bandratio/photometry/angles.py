@@ -10,7 +10,15 @@ import numpy as np
 import xarray as xr
 from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["LABORATORY", "LEAST_COSINE", "Geometry", "angle_plane", "cosine", "refuse_radians"]
+__all__ = [
+    "LABORATORY",
+    "LEAST_COSINE",
+    "Geometry",
+    "angle_plane",
+    "cosine",
+    "refuse_impossible",
+    "refuse_radians",
+]
 
 #: Below this cosine no quantity is divided by it [1] (common practice, no source).
 LEAST_COSINE = 0.01
@@ -214,6 +222,28 @@ def refuse_radians(**planes: xr.DataArray) -> None:
         raise ValueError(
             f"{told}: these look like radians or cosines; give degrees (np.degrees converts radians). Where the "
             "angles are truly this small, give 0"
+        )
+
+
+def refuse_impossible(
+    incidence: xr.DataArray, emission: xr.DataArray, phase: xr.DataArray, slack: float
+) -> None:
+    """Refuse angles [deg] that violate |i − e| ≤ g ≤ i + e at every pixel looked at; lazy ones are left to the flags."""
+    planes = (incidence, emission, phase)
+    if any(plane.chunks is not None for plane in planes):
+        return
+    size = max(plane.size for plane in planes)
+    step = max(1, size // 65_536)
+    i, e, g = (plane.values.reshape(-1)[::step] if plane.size == size else plane.values for plane in planes)
+    finite = np.isfinite(i + e + g)
+    possible = finite & (g >= np.abs(i - e) - slack) & (g <= i + e + slack)
+    if finite.any() and not possible.any():
+        at = int(np.argmax(finite))
+        first = [float(np.broadcast_to(angle, finite.shape).reshape(-1)[at]) for angle in (i, e, g)]
+        raise ValueError(
+            "incidence, emission and phase cannot belong together at any pixel: the phase angle lies between their "
+            f"difference and their sum, got for example {first[0]:g}, {first[1]:g} and {first[2]:g}°; are all three in "
+            "degrees?"
         )
 
 

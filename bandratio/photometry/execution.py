@@ -65,7 +65,9 @@ def lazily(
         # values are needed for the flags only where the law itself can refuse them
         if part == "flag" and isinstance(correction.laws[0], Hapke):
             return da.blockwise(_part, pixel, data, "z" + pixel, *pairs, part=part, dtype=dtype, **common)
-        return da.blockwise(_part_of_geometry, pixel, *pairs, part=part, dtype=dtype, **common)
+        return da.blockwise(
+            _part_of_geometry, pixel, *pairs, part=part, kind=data.dtype, dtype=dtype, **common
+        )
 
     index = "z" + pixel
     values = da.blockwise(_part, index, data, index, *pairs, part="values", dtype=data.dtype, **common)
@@ -80,8 +82,10 @@ def _part(
     return flag if part == "flag" else out
 
 
-def _part_of_geometry(*planes: NDArray, correction: Correction, names: tuple[str, ...], part: str) -> NDArray:
-    none = np.empty((0, *planes[0].shape), dtype=np.float32)
+def _part_of_geometry(
+    *planes: NDArray, correction: Correction, names: tuple[str, ...], part: str, kind: Any
+) -> NDArray:
+    none = np.empty((0, *planes[0].shape), dtype=kind)
     _, flag, gain = _run(none, dict(zip(names, planes, strict=True)), correction, sigma=part == "gain")
     return flag if part == "flag" else gain
 
@@ -132,11 +136,12 @@ def _plane_by_plane(
 ) -> None:
     angles = (planes["incidence"], planes["emission"], planes["phase"])
     marked = correction.flags(*angles, planes.get("shadow"))
+    if gain.size:
+        # before the values are looked at, so that the sigma depends on the geometry alone
+        gain[stretch] = correction.sigma(*angles, marked, planes.get("slope_sigma"))
     if values.shape[0]:
         correction.apply(values[:, stretch], *angles, marked, out[:, stretch])
     flag[stretch] = marked
-    if gain.size:
-        gain[stretch] = correction.sigma(*angles, marked, planes.get("slope_sigma"))
 
 
 def _compiled(

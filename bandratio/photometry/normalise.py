@@ -10,11 +10,11 @@ import numpy as np
 import xarray as xr
 from numpy.typing import ArrayLike, NDArray
 
-from .._checks import non_negative
+from .._checks import non_negative, suggestion
 from ..bands import TOLERANCE_NM
 from ..cube import is_lazy, require_cube
-from .angles import Geometry, angle_plane, refuse_radians
-from .correction import REASONS, Correction
+from .angles import Geometry, angle_plane, refuse_impossible, refuse_radians
+from .correction import REASONS, SLACK_DEG, Correction
 from .execution import at_once, lazily
 from .hapke import Hapke
 from .laws import LAWS, Law, law_of
@@ -116,7 +116,7 @@ def normalise(
         raise ValueError(
             f"the cube is already normalised ({cube.attrs['normalisation']}); start from the cube as it was measured"
         )
-    chosen = Hapke() if isinstance(law, str) and law == "hapke" else _law(law)
+    chosen = _law(law)
     target = Geometry.of(to)
     held = require_quantity(cube, what="normalise")
     angles = {
@@ -124,6 +124,7 @@ def normalise(
         for name, plane in (("incidence", incidence), ("emission", emission), ("phase", phase))
     }
     refuse_radians(**angles)
+    refuse_impossible(angles["incidence"], angles["emission"], angles["phase"], SLACK_DEG)
     if held == "zero_phase_albedo":
         _check_zero_phase(angles, phase_function)
     sigma_plane = _slope_sigma(slope_sigma, cube)
@@ -205,9 +206,9 @@ def masked_pixels(labelled: xr.DataArray | xr.Dataset) -> dict[str, int]:
 
 def _law(law: str | Law) -> Law:
     if isinstance(law, str) and law not in LAWS:
-        from .._checks import suggestion
-
-        raise ValueError(f"unknown photometric law {law!r}{suggestion(law, [*LAWS, 'hapke'])}")
+        if law == Hapke.name:
+            return Hapke()
+        raise ValueError(f"unknown photometric law {law!r}{suggestion(law, [*LAWS, Hapke.name])}")
     return law_of(law)
 
 

@@ -25,7 +25,7 @@ def rough_height(size=96, slope_deg=12.0, seed=5):
     k = np.hypot(*np.meshgrid(np.fft.fftfreq(size), np.fft.fftfreq(size)))
     spectrum = np.fft.fft2(rng.normal(size=(size, size))) * np.exp(-((k / 0.06) ** 2))
     height = np.fft.ifft2(spectrum).real
-    slope = np.hypot(*np.gradient(height)).std()
+    slope = np.sqrt((np.hypot(*np.gradient(height)) ** 2).mean())
     return height * np.tan(np.deg2rad(slope_deg)) / slope
 
 

@@ -23,6 +23,7 @@ from bandratio.photometry.laws import law_of
 
 DISK_LAWS = [Lambert(), LommelSeeliger(), LunarLambert(), LunarLambert(0.4), Minnaert(0.7), Akimov()]
 
+NODES = np.polynomial.legendre.leggauss(400)
 angle = st.floats(0, 80)
 azimuths = st.floats(0, 180)
 
@@ -153,7 +154,7 @@ def test_hapke_gives_nan_where_no_albedo_is_bright_enough():
 @given(b=st.floats(0, 0.9), c=st.floats(-1, 1))
 def test_single_scattering_phase_function_has_mean_one(b, c):
     # ½ ∫ p(g) sin g dg = 1, the definition (Hapke 2012, ch. 6)
-    x, weight = np.polynomial.legendre.leggauss(400)
+    x, weight = NODES
     assert 0.5 * (
         weight * Hapke(b=b, c=c).single_scattering(np.degrees(np.arccos(x)))
     ).sum() == pytest.approx(1, rel=1e-6)
