@@ -7,6 +7,7 @@ from typing import Any
 import click
 
 from ._options import band_options, noise_from, noise_options, numbers
+from ._running import progress_bar, run_options, scheduled
 
 __all__ = ["command"]
 
@@ -26,13 +27,27 @@ __all__ = ["command"]
 )
 @click.option("--parts", is_flag=True, help="Also write the random and the shared part of each sigma.")
 @click.option("--overwrite", is_flag=True, help="Replace OUT where it exists.")
+@run_options
 @band_options
 @noise_options
 def command(
-    scene: str, output: str, names: str | None, tolerance: float, parts: bool, overwrite: bool, **given: Any
+    scene: str,
+    output: str,
+    names: str | None,
+    tolerance: float,
+    parts: bool,
+    overwrite: bool,
+    resume: bool,
+    scheduler: str | None,
+    workers: int | None,
+    **given: Any,
 ) -> None:
-    """Map the spectral parameters of SCENE, each with its standard uncertainty."""
-    from ..files import open_cube, write_maps
+    """Map the spectral parameters of SCENE, each with its standard uncertainty.
+
+    Scenes of any size are mapped block by block. OUT appears when it is whole; a run that was killed is
+    continued by the same command with --resume.
+    """
+    from ..files import open_cube, write_and_count
     from ..maps import parameters
     from ._closing_table import closing_table
 
@@ -47,6 +62,8 @@ def command(
     )
     wanted = names.split(",") if names else None
     maps = parameters(cube, noise, wanted, tolerance=tolerance, parts=parts)
-    written = write_maps(maps, output, overwrite=overwrite)
-    click.echo(closing_table(maps))
-    click.echo(f"written to {written}")
+    maps.attrs["input"] = cube.attrs["input"]
+    with scheduled(scheduler, workers), progress_bar("mapping") as progress:
+        written = write_and_count(maps, output, overwrite=overwrite, resume=resume, progress=progress)
+    click.echo(closing_table(maps, written.counts))
+    click.echo(f"written to {output}")
