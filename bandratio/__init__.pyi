@@ -13,13 +13,13 @@ from .lidar import (
     as_returns,
     calibrate_lidar,
     flag_arguments,
+    grid_returns,
     lidar_ratio,
 )
 from .maps import parameters
 from .materials import material_table
 from .noise import Noise
 from .noise_estimate import add_misregistration, estimate_noise
-from .planning import compare_filter_sets, rank_bands
 from .photometry import (
     Akimov,
     ExponentialPhase,
@@ -34,7 +34,9 @@ from .photometry import (
     normalise,
     require_quantity,
 )
+from .planning import compare_filter_sets, rank_bands
 from .plots import plot_composite, plot_histogram, plot_map, plot_scatter
+from .pyroclastic import pyroclastic_flags
 from .ratio import BandRatio
 from .spectra import band_average, effective_wavelength, open_library, reference_spectra
 

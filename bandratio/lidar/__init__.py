@@ -2,6 +2,7 @@
 
 from .albedo import albedo_from_returns, flag_arguments
 from .calibration import LidarCalibration, LidarChannel
+from .grid import grid_returns
 from .ratio import lidar_ratio
 from .returns import as_returns
 from .target import calibrate_lidar
@@ -13,5 +14,6 @@ __all__ = [
     "as_returns",
     "calibrate_lidar",
     "flag_arguments",
+    "grid_returns",
     "lidar_ratio",
 ]

@@ -173,7 +173,7 @@ def flag_arguments(albedos: xr.Dataset) -> dict[str, Any]:
         arguments[name] = arguments[name].fillna(0)
     arguments["gain_sigma"] = float(albedos.attrs.get("gain_sigma", 0))
     # unknown incidence is not the laboratory's: NaN asks for the hull of every incidence
-    arguments["incidence_deg"] = albedos["incidence_deg"] if "incidence_deg" in albedos else np.nan
+    arguments["incidence_deg"] = albedos.get("incidence_deg", np.nan)
     return arguments
 
 
