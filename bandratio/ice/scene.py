@@ -6,6 +6,7 @@ import os
 import tempfile
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -128,12 +129,13 @@ class Scene:
         )  # fmt: skip
         return {name: stacked[i].astype(dtypes[name]) for i, name in enumerate(names)}
 
+    @cached_property
+    def _flat(self) -> dict[str, Any]:
+        return {name: np.ravel(array) if np.ndim(array) else array for name, array in self.arrays.items()}
+
     def _block(self, first: int, last: int) -> Points:
         return self.points(
-            {
-                name: np.ravel(array)[first:last] if np.ndim(array) else array
-                for name, array in self.arrays.items()
-            }
+            {name: array[first:last] if np.ndim(array) else array for name, array in self._flat.items()}
         )
 
     def _from_parts(self, parts: tuple[NDArray, ...]) -> Points:
