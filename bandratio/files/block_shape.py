@@ -49,7 +49,7 @@ def block_shape(
         high = max(1, pixels // (columns * tile_rows)) * tile_rows
         even = high // 8 * 8
         return min(rows, even if even and even % tile_rows == 0 else high), columns
-    side = int(pixels**0.5)
+    side = min(int(pixels**0.5), pixels // tile_columns)
     high = max(1, side // tile_rows) * tile_rows
     wide = max(1, pixels // (high * tile_columns)) * tile_columns
     return min(rows, high), min(columns, wide)

@@ -84,7 +84,12 @@ class Source:
             bounds.append((low, high))
             rest.append(inner)
         if any(low >= high for low, high in bounds):
-            return np.empty([high - low for low, high in bounds], self.dtype)
+            sizes = [
+                high - low if isinstance(inner, slice) else np.size(inner)
+                for (low, high), inner in zip(bounds, rest, strict=True)
+                if isinstance(inner, slice) or np.ndim(inner)
+            ]
+            return np.empty(sizes, self.dtype)
         block = self._block(tuple(bounds))
         for axis in reversed(range(self.ndim)):
             if not isinstance(rest[axis], slice):
