@@ -5,7 +5,7 @@ from .cube import as_cube
 from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold, thresholds
 from .files import open_cube, open_maps, open_returns, write_maps
-from .ice import ice_flags
+from .ice import ice_flags, ice_fraction
 from .lidar import (
     LidarCalibration,
     LidarChannel,
@@ -32,10 +32,13 @@ from .photometry import (
     convert_quantity,
     masked_pixels,
     normalise,
+    open_geometry,
     require_quantity,
+    slope_sigma_from_height,
+    terrain_geometry,
 )
 from .planning import compare_filter_sets, rank_bands
-from .plots import plot_composite, plot_histogram, plot_map, plot_scatter
+from .plots import plot_composite, plot_histogram, plot_ice_plane, plot_map, plot_scatter
 from .pyroclastic import pyroclastic_flags
 from .ratio import BandRatio
 from .spectra import band_average, effective_wavelength, open_library, reference_spectra

@@ -100,7 +100,12 @@ class Scene:
                 for name, data in results.items()
             }
         )
-        flags.attrs = {"Conventions": "CF-1.11", "p_value_cut": cuts[1], **self._sight(decision, noise)}
+        flags.attrs = {
+            "Conventions": "CF-1.11",
+            "p_value_cut": cuts[1],
+            **{f"typical_{name}": value for name, value in noise.items()},
+            **self._sight(decision, noise),
+        }
         return flags
 
     def mapped(
@@ -243,6 +248,7 @@ class Scene:
                 "ice": "not used with a lone ratio",
                 "least_areal_ice": np.nan,
                 "least_areal_ice_meaning": "not known where one ratio is all that is known of the ground",
+                "ice_free_ratio": ground,
             }
         incidence = typical.pop("incidence_deg")
         at = None if np.isnan(incidence) else incidence
@@ -265,7 +271,21 @@ class Scene:
             "ice": decision.ice.summary,
             "least_areal_ice": fraction,
             "least_areal_ice_meaning": sight.sentence,
+            **_drawing(decision, incidence, ices),
         }
+
+
+def _drawing(decision: Decision, incidence: float, ices: NDArray[np.float64]) -> dict[str, Any]:
+    """What a picture of the plane needs: corners of the ice-free hull and the ices, at the typical incidence."""
+    hulls = decision.hulls
+    corners = hulls.hulls[int(hulls.bins(np.array([incidence]))[0])].vertices
+    return {
+        "ice_free_hull_red": corners[:, 0],
+        "ice_free_hull_infrared": corners[:, 1],
+        "ice_red": ices[:, 0],
+        "ice_infrared": ices[:, 1],
+        "ice_names": ", ".join(decision.ice.names),
+    }
 
 
 _TYPICAL = ("sigma_red", "sigma_infrared", "relative_red", "relative_infrared", "incidence_deg")

@@ -2,7 +2,8 @@
 
 from .composite import plot_composite
 from .histogram import plot_histogram
+from .ice import plot_ice_plane
 from .maps import plot_map
 from .scatter import plot_scatter
 
-__all__ = ["plot_composite", "plot_histogram", "plot_map", "plot_scatter"]
+__all__ = ["plot_composite", "plot_histogram", "plot_ice_plane", "plot_map", "plot_scatter"]
