@@ -1,7 +1,5 @@
 """Opening cubes: what each kind of file says, and what is asked for where it says nothing."""
 
-import warnings
-
 import numpy as np
 import pytest
 import rasterio
@@ -13,7 +11,7 @@ from hypothesis import strategies as st
 import bandratio as br
 from bandratio.files.band_metadata import band_metadata, to_nm, wavelength_in_text
 from bandratio.files.block_shape import block_shape
-from bandratio.files.sources import RasterSource, identity_of
+from bandratio.files.sources import RasterSource, identity_of, open_raster
 
 CENTRES = [480.0, 600.0, 700.0, 750.0, 830.0]
 #: IAU/IAG mean radius of the Moon: Archinal et al. 2018, Celest. Mech. Dyn. Astron. 130, 22
@@ -25,17 +23,10 @@ def values() -> np.ndarray:
     return np.random.default_rng(1).uniform(0.05, 0.4, (5, 33, 47)).astype(np.float32)
 
 
-def raster(*arguments, **options):
-    """Open a raster for a test; only the test's own opening may go without a map projection unremarked."""
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", rasterio.errors.NotGeoreferencedWarning)
-        return rasterio.open(*arguments, **options)
-
-
 def write_tif(path, stored, crs=None, transform=None, **options):
     bands, rows, columns = stored.shape
     place = {"transform": transform} if transform is not None else {}
-    with raster(
+    with open_raster(
         path,
         "w",
         driver="GTiff",
@@ -147,7 +138,7 @@ def test_geotiff_scale_offset_and_missing_of_each_band(tmp_path, values):
     stored = np.round((values - 0.01) * 20_000).astype(np.uint16)
     stored[:, 0, 0] = 65535
     path = write_tif(tmp_path / "scene.tif", stored, nodata=65535)
-    with raster(path, "r+") as file:
+    with open_raster(path, "r+") as file:
         file.scales, file.offsets = (1 / 20_000,) * 5, (0.01,) * 5
         for band, centre in enumerate(CENTRES, start=1):
             file.set_band_description(band, f"{centre:g} nm")
@@ -163,7 +154,7 @@ def test_mask_beside_the_values_is_missing(tmp_path, values):
     mask[5:9, 3] = 0
     with rasterio.Env(GDAL_TIFF_INTERNAL_MASK=True):
         path = write_tif(tmp_path / "scene.tif", values)
-        with raster(path, "r+") as file:
+        with open_raster(path, "r+") as file:
             file.write_mask(mask)
     cube = br.open_cube(path, CENTRES)
     np.testing.assert_array_equal(cube, np.where(mask == 0, np.nan, values))
@@ -181,7 +172,7 @@ def test_mask_beside_the_values_is_missing(tmp_path, values):
 )
 def test_wavelengths_in_the_tags_of_bands(tmp_path, values, tags, namespace):
     path = write_tif(tmp_path / "scene.tif", values)
-    with raster(path, "r+") as file:
+    with open_raster(path, "r+") as file:
         for band, centre in enumerate(CENTRES, start=1):
             file.update_tags(
                 band, ns=namespace, **{k: t.format(um=centre / 1000, nm=centre) for k, t in tags.items()}
@@ -253,7 +244,7 @@ def test_projection_and_transform_are_kept(tmp_path, values, crs):
     )
     path = write_tif(tmp_path / "scene.tif", values, crs, transform)
     cube = br.open_cube(path, CENTRES)
-    with raster(path) as file:
+    with open_raster(path) as file:
         # as the file holds it: the scale of a polar projection becomes a latitude of true scale
         wanted = file.crs.to_dict()
     assert cube.rio.crs.to_dict() == wanted
@@ -262,7 +253,7 @@ def test_projection_and_transform_are_kept(tmp_path, values, crs):
     assert cube.x.values[:2].tolist() == [transform.c + transform.a * 0.5, transform.c + transform.a * 1.5]
     assert cube.y.values[:2].tolist() == [transform.f + transform.e * 0.5, transform.f + transform.e * 1.5]
     maps = br.write_maps(br.parameters(cube), tmp_path / "maps.tif")
-    with raster(maps) as file:
+    with open_raster(maps) as file:
         assert file.crs.to_dict() == wanted
         assert file.transform == transform
 
@@ -355,7 +346,7 @@ def test_chunks_as_asked(tmp_path, values):
 
 
 def test_blocks_follow_the_tiles_of_the_file(tmp_path):
-    with raster(
+    with open_raster(
         tmp_path / "tiled.tif", "w", driver="GTiff", width=4000, height=3000, count=2, dtype="float32", tiled=True,
         blockxsize=256, blockysize=512, compress="deflate", sparse_ok=True,
     ):  # fmt: skip

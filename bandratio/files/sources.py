@@ -193,7 +193,7 @@ def _equals(stored: NDArray, nodata: float | None) -> NDArray | None:
     return missing if missing.any() else None
 
 
-def open_raster(path: str) -> Any:
+def open_raster(path: str, mode: str = "r", **options: Any) -> Any:
     """Open a raster; one without map projection is no reason for a warning."""
     import warnings
 
@@ -201,7 +201,7 @@ def open_raster(path: str) -> Any:
 
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", rasterio.errors.NotGeoreferencedWarning)
-        return rasterio.open(path)
+        return rasterio.open(path, mode, **options)
 
 
 @dataclass(frozen=True)
