@@ -8,7 +8,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from .._checks import positive
+from .._checks import listed, positive
 from .calibration import CHANNELS, LidarCalibration, LidarChannel
 from .equation import albedo_per_energy, return_variance
 from .returns import QUALITY, require_returns
@@ -29,7 +29,8 @@ _PARTS = {
     "_sigma_random": "standard uncertainty of the albedo, part that is new in each shot",
     "_sigma_shared": "standard uncertainty of the albedo, part that all shots share (calibration)",
     "_sigma_additive": "random standard uncertainty that does not scale with the albedo (counting, background, electronics)",
-    "_relative": "random error that scales with the albedo, as a fraction",
+    "_sigma_common": "random standard uncertainty that moves both albedos of a shot together (range, incidence)",
+    "_relative": "random error of this channel that scales with the albedo, as a fraction",
     "_limit": "least albedo that the receiver would have recorded",
     "_quality": "quality of the return",
 }
@@ -63,8 +64,9 @@ def albedo_from_returns(
     -------
     Dataset
         For each channel the albedo, NaN where there is none, and ``_sigma`` with its parts ``_sigma_random`` and
-        ``_sigma_shared``; of the random part, ``_sigma_additive`` does not scale with the albedo and ``_relative``
-        is the fraction that does; ``_limit`` is the albedo that the shot's dropout would lie below, NaN where
+        ``_sigma_shared``. The random part is made of ``_sigma_additive``, which does not scale with the albedo,
+        ``_sigma_common``, which moves both albedos of the shot by one factor, and ``_relative``, the fraction that
+        scales with this albedo alone; ``_limit`` is the albedo that the shot's dropout would lie below, NaN where
         the return is missing or saturated for another reason; ``_quality``. ``covariance``: random covariance of the
         two albedos (range and incidence are one for both). Attributes: ``gain_sigma``, the shared error of the
         red over infrared gain [fraction].
@@ -110,9 +112,8 @@ def albedo_from_returns(
         common = _common_relative(distance, tilt, calibration)
         surge_here = surge if channel == "red" else 1.0
         variables |= _channel(channel, returns, distance, tilt, common, known_channel, surge_here)
-    # one pulse has one range and one incidence for both channels; two pulses have their own
-    moves_both = 0.0 if "range_m_infrared" in returns else common**2
-    covariance = moves_both * variables["red"] * variables["infrared"]
+    signs: xr.DataArray = np.sign(variables["red"] * variables["infrared"])  # type: ignore[assignment]
+    covariance = signs * variables["red_sigma_common"] * variables["infrared_sigma_common"]
     variables["covariance"] = covariance.assign_attrs(
         long_name="random covariance of the red and the infrared albedo", units="1"
     )
@@ -145,8 +146,8 @@ def flag_arguments(albedos: xr.Dataset) -> dict[str, Any]:
     Returns
     -------
     dict
-        ``red``, ``infrared``, ``sigma_red``, ``sigma_infrared`` (the additive random part), ``relative_red``,
-        ``relative_infrared``, ``covariance``, ``gain_sigma``, ``infrared_limit``, ``incidence_deg`` (NaN: unknown).
+        ``red``, ``infrared``, ``sigma_red``, ``sigma_infrared`` (the additive and the common random part),
+        ``relative_red``, ``relative_infrared``, ``covariance``, ``gain_sigma``, ``infrared_limit``, ``incidence_deg`` (NaN: unknown).
 
     Examples
     --------
@@ -157,20 +158,25 @@ def flag_arguments(albedos: xr.Dataset) -> dict[str, Any]:
     >>> float(flag_arguments(albedos)["relative_red"].values[0])
     0.03
     """
-    wanted = {
-        "red": "red", "infrared": "infrared", "sigma_red": "red_sigma_additive",
-        "sigma_infrared": "infrared_sigma_additive", "relative_red": "red_relative",
-        "relative_infrared": "infrared_relative", "covariance": "covariance", "infrared_limit": "infrared_limit",
-    }  # fmt: skip
-    absent = [name for name in wanted.values() if name not in albedos]
+    names = ("", "_sigma_additive", "_sigma_common", "_relative")
+    wanted = [*(f"{c}{part}" for c in CHANNELS for part in names), "covariance", "infrared_limit"]
+    absent = [name for name in wanted if name not in albedos]
     if absent:
         raise ValueError(
-            f"the albedos hold no {', '.join(absent)}; albedo_from_returns and grid_returns give what is needed"
+            f"the albedos hold no {listed(absent)}; albedo_from_returns and grid_returns give what is needed"
         )
-    arguments: dict[str, Any] = {name: albedos[key] for name, key in wanted.items()}
     # one missing or saturated channel has no sigma of its own; any number serves where there is no point to judge
-    for name in ("sigma_red", "sigma_infrared", "relative_red", "relative_infrared", "covariance"):
-        arguments[name] = arguments[name].fillna(0)
+    filled = albedos.fillna({name: 0.0 for name in wanted if name not in (*CHANNELS, "infrared_limit")})
+    arguments: dict[str, Any] = {
+        "infrared_limit": albedos["infrared_limit"],
+        "covariance": filled["covariance"],
+    }
+    for name in CHANNELS:
+        arguments[name] = albedos[name]
+        arguments[f"sigma_{name}"] = np.hypot(
+            filled[f"{name}_sigma_additive"], filled[f"{name}_sigma_common"]
+        )
+        arguments[f"relative_{name}"] = filled[f"{name}_relative"]
     arguments["gain_sigma"] = float(albedos.attrs.get("gain_sigma", 0))
     # unknown incidence is not the laboratory's: NaN asks for the hull of every incidence
     arguments["incidence_deg"] = albedos.get("incidence_deg", np.nan)
@@ -188,8 +194,11 @@ def _channel(
 ) -> dict[str, xr.DataArray]:
     transmitted = transmitted_of(name, returns, channel)
 
+    # two pulses have their own range and incidence each: their errors are not common to both channels
+    apart = "range_m_infrared" in returns
+
     def block(*given: Any) -> tuple[NDArray, ...]:
-        return _one_channel(*given, channel=channel, name=name)
+        return _one_channel(*given, channel=channel, name=name, apart=apart)
 
     results = xr.apply_ufunc(
         block,
@@ -226,6 +235,7 @@ def _one_channel(
     *,
     channel: LidarChannel,
     name: str,
+    apart: bool,
 ) -> tuple[NDArray, ...]:
     """Albedo and its parts, in the order of `_PARTS`, as arrays."""
     refuse_impossible(range_m, incidence, transmitted, name)
@@ -242,6 +252,12 @@ def _one_channel(
         )
     variance = np.where(np.isnan(stated), variance, stated**2)
     if channel.limit is None:
+        dropouts = int((quality == QUALITY["dropout"]).sum())
+        if dropouts and name == "infrared":  # a missing red is no data whatever its limit
+            raise ValueError(
+                f"{dropouts} infrared returns are dropouts, but the infrared channel has no limit; give "
+                "LidarChannel(limit=…), the least energy that it records, or zero='missing'"
+            )
         limit = np.full(quality.shape, np.nan)
     else:
         below = channel.limit if channel.background_subtracted else np.maximum(channel.limit - background, 0)
@@ -259,12 +275,13 @@ def _one_channel(
     albedo = np.where(used, net * factor, np.nan)
     _refuse_unbelievable(albedo, name)
     level = np.where(quality == QUALITY["dropout"], limit, albedo)
-    relative = np.broadcast_to(np.sqrt(channel.relative**2 + common**2), level.shape)
+    both = 0 * level if apart else common * np.abs(level)
+    relative = np.broadcast_to(np.hypot(channel.relative, common if apart else 0.0), level.shape)
     additive = np.where(quality <= QUALITY["dropout"], np.sqrt(variance) * factor, np.nan)
-    random = np.sqrt(additive**2 + (relative * level) ** 2)
+    random = np.sqrt(additive**2 + both**2 + (relative * level) ** 2)
     shared = channel.constant_sigma / channel.constant * np.abs(level)
     total = np.sqrt(random**2 + shared**2)
-    return albedo, total, random, shared, additive, relative, limit, quality.astype(np.int8)
+    return albedo, total, random, shared, additive, both, relative, limit, quality.astype(np.int8)
 
 
 def _common_relative(

@@ -17,8 +17,8 @@ __all__ = ["grid_returns"]
 
 _SUMS = (
     "n", "dropouts", "incidence",
-    "red", "red_additive", "red_scaling", "red_shared",
-    "infrared", "infrared_additive", "infrared_scaling", "infrared_shared", "covariance",
+    "red", "red_additive", "red_common", "red_scaling", "red_shared",
+    "infrared", "infrared_additive", "infrared_common", "infrared_scaling", "infrared_shared", "covariance",
 )  # fmt: skip
 _BLOCK = 1_000_000
 
@@ -114,7 +114,7 @@ def grid_returns(albedos: xr.Dataset, like: xr.DataArray | xr.Dataset, *, pool: 
     return _described(grid, albedos)
 
 
-_NEEDED = ("", "_sigma_additive", "_relative", "_sigma_shared", "_limit", "_quality")
+_NEEDED = ("", "_sigma_additive", "_sigma_common", "_relative", "_sigma_shared", "_limit", "_quality")
 
 
 def _axis(like: xr.DataArray | xr.Dataset, name: str) -> NDArray:
@@ -192,10 +192,12 @@ def _add(sums: NDArray, block: dict[str, NDArray], cell: NDArray[np.intp]) -> No
         "incidence": block.get("incidence_deg", np.zeros(cell.size)),
         "red": block["red"],
         "red_additive": block["red_sigma_additive"] ** 2,
+        "red_common": block["red_sigma_common"] ** 2,
         "red_scaling": (block["red_relative"] * block["red"]) ** 2,
         "red_shared": block["red_sigma_shared"],
         "infrared": infrared,
         "infrared_additive": block["infrared_sigma_additive"] ** 2,
+        "infrared_common": block["infrared_sigma_common"] ** 2,
         "infrared_scaling": (block["infrared_relative"] * infrared) ** 2,
         "infrared_shared": block["infrared_sigma_shared"],
         "covariance": np.nan_to_num(block["covariance"]),
@@ -219,13 +221,15 @@ def _means(total: dict[str, NDArray], incidence_known: bool) -> dict[str, NDArra
         additive = np.sqrt(total[f"{channel}_additive"]) / n
         scaling = np.sqrt(total[f"{channel}_scaling"]) / n
         shared = total[f"{channel}_shared"] / n  # one error for all shots: it does not average away
-        random = np.hypot(additive, scaling)
+        common = np.sqrt(total[f"{channel}_common"]) / n
+        random = np.sqrt(additive**2 + common**2 + scaling**2)
         cells |= {
             channel: level,
             f"{channel}_sigma": np.hypot(random, shared),
             f"{channel}_sigma_random": random,
             f"{channel}_sigma_shared": shared,
             f"{channel}_sigma_additive": additive,
+            f"{channel}_sigma_common": common,
             f"{channel}_relative": np.divide(
                 scaling, np.abs(level), out=np.zeros_like(level), where=scaling > 0
             ),

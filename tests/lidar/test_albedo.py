@@ -62,16 +62,15 @@ def test_sigma_covers_poisson_counts_background_calibration_and_jitter(backgroun
     albedos = br.albedo_from_returns(returns, _calibration(part, part, range_sigma_m=0.002 * range_m))
     deviation = (albedos["red"] - truth) / albedos["red_sigma"]
     within = float((abs(deviation) < 1).mean())
-    assert (
-        abs(within - 0.6827) < 4 * np.sqrt(0.68 * 0.32 / n) + 0.005
-    )  # to it the skew of counts, a few per mille
+    skew = 0.005  # of counts and calibration, a few per mille
+    assert abs(within - 0.6827) < 4 * np.sqrt(0.68 * 0.32 / n) + skew
     parts = albedos["red_sigma_random"] ** 2 + albedos["red_sigma_shared"] ** 2
     np.testing.assert_allclose(albedos["red_sigma"] ** 2, parts)
     np.testing.assert_allclose(albedos["red_sigma_shared"], 0.03 * albedos["red"])
     scaling = albedos["red_relative"] * albedos["red"]
-    np.testing.assert_allclose(
-        albedos["red_sigma_random"] ** 2, albedos["red_sigma_additive"] ** 2 + scaling**2
-    )
+    unscaled = albedos["red_sigma_additive"] ** 2 + albedos["red_sigma_common"] ** 2
+    np.testing.assert_allclose(albedos["red_sigma_random"] ** 2, unscaled + scaling**2)
+    np.testing.assert_allclose(albedos["red_sigma_common"], 2 * 0.002 * albedos["red"])
 
 
 def test_range_and_incidence_move_both_channels_alike():
@@ -234,6 +233,13 @@ GOOD = br.as_returns([100.0], [50.0], range_m=[1e5], incidence_deg=[0.0], units=
         ),
         (GOOD, {"red": 1}, {}, TypeError, "LidarCalibration, got dict"),
         (GOOD.drop_vars("range_m"), _calibration(), {}, ValueError, r"no range_m \[m\].*returns.assign"),
+        (
+            br.as_returns([5.0], [0.0], zero="dropout", range_m=[1e5], incidence_deg=[0]),
+            _calibration(),
+            {},
+            ValueError,
+            "1 infrared returns are dropouts, .*no limit; give LidarChannel.limit=…",
+        ),
         (GOOD.drop_vars("incidence_deg"), _calibration(), {}, ValueError, 'no incidence_deg.*"unknown"'),
         (
             GOOD,
