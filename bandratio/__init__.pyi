@@ -4,8 +4,16 @@ from .composition import iron_oxide, optical_maturity, titanium_oxide
 from .cube import as_cube
 from .cube_findings import check_cube
 from .detection import Threshold, scene_threshold, thresholds
-from .files import open_cube, open_maps, open_returns, write_maps
-from .ice import ice_flags, ice_fraction
+from .files import (
+    open_cube,
+    open_elevation,
+    open_geometry,
+    open_maps,
+    open_returns,
+    write_maps,
+    write_regions,
+)
+from .ice import ice_flags, ice_fraction, rank_candidates
 from .lidar import (
     LidarCalibration,
     LidarChannel,
@@ -32,7 +40,6 @@ from .photometry import (
     convert_quantity,
     masked_pixels,
     normalise,
-    open_geometry,
     require_quantity,
     slope_sigma_from_height,
     terrain_geometry,
@@ -41,6 +48,7 @@ from .planning import compare_filter_sets, rank_bands
 from .plots import plot_composite, plot_histogram, plot_ice_plane, plot_map, plot_scatter
 from .pyroclastic import pyroclastic_flags
 from .ratio import BandRatio
+from .regions import candidate_regions, candidate_table, region_means
 from .spectra import band_average, effective_wavelength, open_library, reference_spectra
 
 __version__: str
