@@ -107,6 +107,8 @@ def parameters(
     attributes["wavelengths"] = listed(centres.tolist(), "nm")
     attributes["noise"] = noise.describe() if noise is not None else "none given"
     attributes["left_out"] = "; ".join(f"{name}: {reason}" for name, reason in left_out.items())
+    if "normalisation" in cube.attrs:
+        attributes["normalisation"] = cube.attrs["normalisation"]
     return xr.Dataset(variables, coords, attributes)
 
 

@@ -8,7 +8,9 @@ __getattr__, __dir__, __all__ = _lazy.attach(
     submod_attrs={
         "atomic": ["beside"],
         "cubes": ["open_cube"],
+        "geometry": ["open_elevation", "open_geometry"],
         "maps": ["open_maps", "write_and_count", "write_maps"],
+        "region_files": ["write_regions"],
         "returns": ["open_returns"],
     },
 )

@@ -6,6 +6,7 @@ from .laws import Akimov, Lambert, Law, LommelSeeliger, LunarLambert, Minnaert
 from .normalise import masked_pixels, normalise
 from .phase import ExponentialPhase, PhaseFunction, TabulatedPhase
 from .quantities import convert_quantity, require_quantity
+from .terrain import slope_sigma_from_height, terrain_geometry
 
 __all__ = [
     "Akimov",
@@ -23,4 +24,6 @@ __all__ = [
     "masked_pixels",
     "normalise",
     "require_quantity",
+    "slope_sigma_from_height",
+    "terrain_geometry",
 ]
