@@ -68,6 +68,8 @@ def material_table(
     >>> print(f"{float(soil.red_slope):.1f} ± {float(soil.red_slope_sigma):.1f} {table.red_slope.units}")
     11.2 ± 1.4 % per 100 nm
     """
+    if wavelengths is None and responses is None:
+        raise ValueError("give the band centres in nm, or responses=…")
     if spectra is None:
         averaged = reference_spectra(wavelengths, fwhm, responses=responses)
     else:
