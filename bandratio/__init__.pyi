@@ -45,7 +45,16 @@ from .photometry import (
     terrain_geometry,
 )
 from .planning import compare_filter_sets, rank_bands
-from .plots import plot_composite, plot_histogram, plot_ice_plane, plot_map, plot_scatter
+from .plots import (
+    plot_composite,
+    plot_histogram,
+    plot_ice_plane,
+    plot_map,
+    plot_materials,
+    plot_scatter,
+    plot_separation,
+    plot_spectra,
+)
 from .pyroclastic import pyroclastic_flags
 from .ratio import BandRatio
 from .regions import candidate_regions, candidate_table, region_means

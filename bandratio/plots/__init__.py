@@ -3,7 +3,17 @@
 from .composite import plot_composite
 from .histogram import plot_histogram
 from .ice import plot_ice_plane
+from .laboratory import plot_materials, plot_separation, plot_spectra
 from .maps import plot_map
 from .scatter import plot_scatter
 
-__all__ = ["plot_composite", "plot_histogram", "plot_ice_plane", "plot_map", "plot_scatter"]
+__all__ = [
+    "plot_composite",
+    "plot_histogram",
+    "plot_ice_plane",
+    "plot_map",
+    "plot_materials",
+    "plot_scatter",
+    "plot_separation",
+    "plot_spectra",
+]
