@@ -60,7 +60,11 @@ def command(**given: Any) -> None:
     """
     from ..materials import material_table
 
-    outputs = [_output(given["output"], (".csv",), given), _output(given["picture"], _PICTURES, given)]
+    overwrite = given["overwrite"]
+    outputs = [
+        _output(given["output"], (".csv",), overwrite),
+        _output(given["picture"], _PICTURES, overwrite),
+    ]
     if (given["wanted"] is None) != (given["unwanted"] is None):
         raise ValueError("thresholds need both --wanted and --unwanted")
     if given["wavelengths"] is None and given["responses"] is None:
@@ -85,17 +89,14 @@ def command(**given: Any) -> None:
         _draw(outputs[1], table, found)
 
 
-def _output(name: str | None, endings: tuple[str, ...], given: dict[str, Any]) -> Path | None:
+def _output(name: str | None, endings: tuple[str, ...], overwrite: bool) -> Path | None:
+    from ..files.atomic import require_free
+
     if name is None:
         return None
-    path = Path(name)
-    if path.suffix.lower() not in endings:
-        raise ValueError(f"{path}: the ending must be one of {', '.join(endings)}")
-    if path.exists() and not given["overwrite"]:
-        raise FileExistsError(f"{path} exists; give --overwrite to replace it")
-    if not path.parent.is_dir():
-        raise FileNotFoundError(f"{path}: there is no folder {path.parent}")
-    return path
+    if Path(name).suffix.lower() not in endings:
+        raise ValueError(f"{name}: the ending must be one of {', '.join(endings)}")
+    return require_free(name, overwrite=overwrite)
 
 
 def _words(text: str | None) -> list[str] | None:
@@ -206,13 +207,10 @@ def _thresholds_text(found: dict[str, Threshold], table: xr.Dataset) -> str:
 
 
 def _write(path: Path, save: Any) -> None:
-    """Beside the final name, then moved into place."""
-    part = path.with_name(f".{path.stem}.part{path.suffix}")
-    try:
-        save(part)
-        part.replace(path)
-    finally:
-        part.unlink(missing_ok=True)
+    from ..files.atomic import beside
+
+    with beside(path, overwrite=True) as unfinished:
+        save(unfinished)
     click.echo(f"written to {path}")
 
 

@@ -66,7 +66,7 @@ def test_outputs(capsys, tmp_path):
     assert picture.read_bytes()[:4] == b"\x89PNG"
     assert sorted(path.name for path in tmp_path.iterdir()) == ["picture.png", "table.csv"]
     code, _, err = run(capsys, *BANDS, "-o", str(table))
-    assert (code, "give --overwrite to replace it" in err) == (2, True)
+    assert (code, "exists already" in err) == (2, True)
 
 
 def test_a_library_of_the_users_own(capsys, tmp_path):
@@ -93,7 +93,7 @@ def test_a_library_of_the_users_own(capsys, tmp_path):
         ([*BANDS, "--quantity", "brdf"], "--quantity is for a --library of your own"),
         ([*BANDS, "--library", "absent"], "absent: no such file or folder of spectra"),
         ([*BANDS, "-o", "table.xlsx"], "the ending must be one of .csv"),
-        ([*BANDS, "--picture", "absent/p.png"], "there is no folder absent"),
+        ([*BANDS, "--picture", "absent/p.png"], "the folder absent does not exist"),
         (
             [*BANDS, "--wanted", "olivine", "--unwanted", "mare"],
             "unwanted group holds 1 samples of 1 specimen",
