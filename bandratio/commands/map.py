@@ -6,6 +6,7 @@ from typing import Any
 
 import click
 
+from ._geometry import count_masked, geometry_lines, geometry_options, normalised
 from ._options import band_options, noise_from, noise_options, numbers
 from ._running import progress_bar, run_options, scheduled
 
@@ -28,6 +29,7 @@ __all__ = ["command"]
 @click.option("--parts", is_flag=True, help="Also write the random and the shared part of each sigma.")
 @click.option("--overwrite", is_flag=True, help="Replace OUT where it exists.")
 @run_options
+@geometry_options
 @band_options
 @noise_options
 def command(
@@ -60,10 +62,12 @@ def command(
         scale=given["scale"],
         nodata=given["nodata"],
     )
+    cube = normalised(cube, given)
     wanted = names.split(",") if names else None
     maps = parameters(cube, noise, wanted, tolerance=tolerance, parts=parts)
-    maps.attrs["input"] = cube.attrs["input"]
+    maps.attrs |= {name: cube.attrs[name] for name in ("input", "geometry_input") if name in cube.attrs}
     with scheduled(scheduler, workers), progress_bar("mapping") as progress:
+        count_masked(maps)
         written = write_and_count(maps, output, overwrite=overwrite, resume=resume, progress=progress)
-    click.echo(closing_table(maps, written.counts))
+    click.echo("\n".join([closing_table(maps, written.counts), *geometry_lines(maps)]))
     click.echo(f"written to {output}")

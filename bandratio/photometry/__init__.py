@@ -6,6 +6,7 @@ from .laws import Akimov, Lambert, Law, LommelSeeliger, LunarLambert, Minnaert
 from .normalise import masked_pixels, normalise
 from .phase import ExponentialPhase, PhaseFunction, TabulatedPhase
 from .quantities import convert_quantity, require_quantity
+from .summary import geometry_summary
 from .terrain import slope_sigma_from_height, terrain_geometry
 
 __all__ = [
@@ -21,6 +22,7 @@ __all__ = [
     "PhaseFunction",
     "TabulatedPhase",
     "convert_quantity",
+    "geometry_summary",
     "masked_pixels",
     "normalise",
     "require_quantity",

@@ -215,7 +215,7 @@ def refuse_radians(**planes: xr.DataArray) -> None:
     looked at; zero everywhere is no sign of radians.
     """
     ranges = {name: _range(_sample(plane)) for name, plane in planes.items()}
-    small = all(high <= (np.pi if name == "phase" else np.pi / 2) for name, (_, high) in ranges.items())
+    small = all(high <= np.pi for _, high in ranges.values())
     zero_phase = "phase" in ranges and ranges["phase"][1] == 0
     if small and not zero_phase and any(high > 0 for _, high in ranges.values()):
         told = ", ".join(f"{name} up to {high:.3g}" for name, (_, high) in ranges.items())

@@ -225,7 +225,7 @@ def test_geometry_travels_through_files(tmp_path):
             np.testing.assert_allclose(back[angle], planes[angle])
         assert ("shadow" in back) == (name != "angles.tif")
     np.testing.assert_array_equal(br.open_geometry(tmp_path / "named.tif").shadow, planes.shadow)
-    with pytest.raises(FileNotFoundError, match="none.tif: no such file"):
+    with pytest.raises(FileNotFoundError, match=r"none\.tif: no such file"):
         br.open_geometry(tmp_path / "none.tif")
     write_raster(tmp_path / "two.tif", angles.to_array().values[:2])
     with pytest.raises(ValueError, match="has 2 bands; wanted three, incidence, emission and phase"):
