@@ -66,12 +66,15 @@ def as_cube(
     """
     cube = array if isinstance(array, xr.DataArray) else _labelled(array)
     if "wavelength" not in cube.dims:
-        cube = cube.rename({"band" if "band" in cube.dims else cube.dims[0]: "wavelength"})
-        cube = cube.drop_vars("band", errors="ignore")
+        band = "band" if "band" in cube.dims else cube.dims[0]
+        if "wavelength" in cube.coords and cube["wavelength"].dims == (band,):
+            cube = cube.swap_dims({band: "wavelength"}).drop_vars("band", errors="ignore")
+        else:
+            # a coordinate `band` counts the bands 1, 2, 3 …; renamed, it would be taken for wavelengths
+            cube = cube.drop_vars(["band", "wavelength"], errors="ignore").rename({band: "wavelength"})
     if cube.dtype.kind not in "fiub":
         raise TypeError(f"reflectance must be real numbers, got {cube.dtype}")
-    if cube.dtype.kind != "f" or cube.dtype.itemsize < 4:
-        cube = cube.astype(np.float32)
+    cube = _computable(cube)
     if wavelengths is None:
         if "wavelength" not in cube.coords:
             raise ValueError("the array has no wavelengths; give wavelengths=[…] in nm, one for each band")
@@ -95,6 +98,14 @@ def as_cube(
 
 _WAVELENGTH = {"units": "nm", "standard_name": "radiation_wavelength", "long_name": "band centre"}
 _FWHM = {"units": "nm", "long_name": "full width at half maximum"}
+
+
+def _computable(cube: xr.DataArray) -> xr.DataArray:
+    # the compiled loop knows float32 and float64 in this machine's byte order
+    if cube.dtype in (np.float32, np.float64) and cube.dtype.isnative:
+        return cube
+    wide = cube.dtype.kind == "f" and cube.dtype.itemsize >= 8
+    return cube.astype(np.float64 if wide else np.float32)
 
 
 def _labelled(array: Any) -> xr.DataArray:
@@ -131,7 +142,7 @@ def wavelength_like(values: ArrayLike, bands: int) -> np.ndarray:
 
 
 def require_cube(cube: xr.DataArray) -> xr.DataArray:
-    """Return `cube` where it is one, with `wavelength` first, else raise with what was wanted."""
+    """Return `cube` where it is one, `wavelength` first, native float32 or float64; else raise what was wanted."""
     if not isinstance(cube, xr.DataArray):
         hint = "; pick one of its variables" if isinstance(cube, xr.Dataset) else "; br.as_cube makes one"
         raise TypeError(
@@ -146,7 +157,7 @@ def require_cube(cube: xr.DataArray) -> xr.DataArray:
     wavelength_array(cube["wavelength"].values, "the cube's wavelengths")
     if cube.dtype.kind != "f":
         raise TypeError(f"a cube holds reflectance as float, got {cube.dtype}; br.as_cube converts it")
-    return cube.transpose("wavelength", ...)
+    return _computable(cube.transpose("wavelength", ...))
 
 
 def band_indices(cube: xr.DataArray, wanted: Sequence[float], tolerance: float = TOLERANCE_NM) -> list[int]:

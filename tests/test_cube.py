@@ -47,6 +47,34 @@ def test_dtypes():
     assert br.as_cube(np.zeros(1, "f8"), [600]).dtype == np.float64
 
 
+@pytest.mark.parametrize(("given", "native"), [(">f4", "f4"), (">f8", "f8"), ("f2", "f4"), ("g", "f8")])
+@pytest.mark.parametrize("lazy", [False, True])
+def test_any_float_is_mapped(given, native, lazy):
+    """Archive formats hold big-endian floats, which the compiled loop does not know."""
+    values = RNG.uniform(0.1, 0.5, (2, 3, 4)).astype(given)
+    plain = xr.DataArray(values, {"wavelength": [600, 700]}, ("wavelength", "y", "x"))
+    plain = plain.chunk(y=2) if lazy else plain
+    assert br.as_cube(plain).dtype == np.dtype(native)
+    maps = br.parameters(plain, br.Noise(random=0.01), ["red_slope"])
+    expected = br.parameters(plain.astype(native), br.Noise(random=0.01), ["red_slope"])
+    assert maps.red_slope.dtype == np.dtype(native)
+    xr.testing.assert_equal(maps.compute(), expected.compute())
+
+
+def test_a_count_of_bands_is_not_taken_for_wavelengths():
+    counted = xr.DataArray(np.zeros((40, 2)), {"band": np.arange(1, 41)}, ("band", "sample"))
+    with pytest.raises(ValueError, match="the array has no wavelengths"):
+        br.as_cube(counted)
+    centres = np.linspace(400, 790, 40)
+    for coordinate in (("band", centres), 500.0):
+        cube = br.as_cube(counted.assign_coords(wavelength=coordinate), centres)
+        assert set(cube.coords) == {"wavelength"}
+        np.testing.assert_array_equal(cube.indexes["wavelength"], centres)
+    np.testing.assert_array_equal(
+        br.as_cube(counted.assign_coords(wavelength=("band", centres))).wavelength, centres
+    )
+
+
 def test_a_lazy_array_stays_lazy():
     cube = br.as_cube(da.zeros((2, 10, 10), chunks=5), [600, 700])
     assert cube.chunks is not None
