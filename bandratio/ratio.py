@@ -266,11 +266,9 @@ class BandRatio:
         used = np.any(self.weights_for(cube["wavelength"].values, tolerance), axis=0)
         band = noise.for_cube(cube, tolerance)
 
-        of_band_random = band.random**2 + band.shot**2 * R.clip(min=0) + (band.relative * R) ** 2
-        of_band_shared = (band.band_gain * R) ** 2 + band.band_offset**2
         g2 = (g**2).isel(wavelength=used)
-        random = (g2 * of_band_random.isel(wavelength=used)).sum("wavelength", skipna=False)
-        shared = (g2 * of_band_shared.isel(wavelength=used)).sum("wavelength", skipna=False)
+        random = (g2 * band.random_variance(R).isel(wavelength=used)).sum("wavelength", skipna=False)
+        shared = (g2 * band.shared_variance(R).isel(wavelength=used)).sum("wavelength", skipna=False)
         if not self.is_pure:
             along = (g * R).isel(wavelength=used).sum("wavelength", skipna=False)
             shared = shared + (band.common_gain * along) ** 2
@@ -303,7 +301,8 @@ class BandRatio:
         Raises
         ------
         ValueError
-            If not exactly one of `noise` and `covariance` is given, or the covariance has another shape.
+            If not exactly one of `noise` and `covariance` is given, or the covariance has another
+            shape, is not finite, not symmetric or has a negative eigenvalue.
         """
         if (noise is None) == (covariance is None):
             raise ValueError("give either noise=… or covariance=…, one of the two")
@@ -316,7 +315,11 @@ class BandRatio:
             raise ValueError(
                 f"covariance must have shape ({bands}, {bands}), one row per band, got {matrix.shape}"
             )
-        if not np.allclose(matrix, matrix.T) or (np.linalg.eigvalsh(matrix) < -1e-9 * np.trace(matrix)).any():
+        if not np.isfinite(matrix).all():
+            raise ValueError("covariance must be finite; this one has missing or infinite elements")
+        # measured by the elements themselves, which are squares of small errors: 1e-8 and less
+        alike = np.allclose(matrix, matrix.T, rtol=1e-6, atol=1e-9 * np.abs(matrix).max())
+        if not alike or (np.linalg.eigvalsh(matrix) < -1e-9 * np.trace(matrix)).any():
             raise ValueError("covariance must be symmetric and without negative eigenvalues; this one is not")
         g = self.gradient(cube, tolerance=tolerance)
         C = xr.DataArray(matrix, dims=("wavelength", "wavelength_2"))

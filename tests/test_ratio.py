@@ -232,6 +232,10 @@ def test_bad_use():
         ratio.sigma(cube, covariance=np.eye(3))
     with pytest.raises(ValueError, match="covariance must be symmetric"):
         ratio.sigma(cube, covariance=[[1, 2], [0, 1]])
+    with pytest.raises(ValueError, match="covariance must be symmetric"):
+        ratio.sigma(cube, covariance=[[1e-8, 9e-9], [0, 1e-8]])
+    with pytest.raises(ValueError, match="covariance must be finite"):
+        ratio.sigma(cube, covariance=[[1, math.nan], [math.nan, 1]])
     with pytest.raises(ValueError, match="covariance must be symmetric and without negative eigenvalues"):
         ratio.sigma(cube, covariance=[[1, 2], [2, 1]])
     with pytest.raises(TypeError, match="a cube must be a DataArray with a wavelength coordinate"):
