@@ -115,7 +115,8 @@ def _reflectance_700(pick: Pick) -> BandRatio:
 
 
 def _mafic_depth_from(pick: Pick, nominal_shoulder: float) -> BandRatio:
-    shoulder, flank = pick(nominal_shoulder, 830)
+    # the flank first: where it is missing, the shoulder is not what to tell about
+    flank, shoulder = pick(830, nominal_shoulder)
     return BandRatio(
         {shoulder: 1, flank: -1},
         {shoulder: 1},
@@ -279,7 +280,7 @@ def resolve(
             raise TypeError(f"names holds {entry!r}; wanted names of the catalogue or BandRatio objects")
         if ratio.name in ratios:
             raise ValueError(f"two parameters are called {ratio.name!r}; give one of them another name=…")
-        if isinstance(entry, BandRatio) and not _agrees_with_catalogue(ratio, wavelengths, tolerance):
+        if not _agrees_with_catalogue(ratio, wavelengths, tolerance):
             raise ValueError(
                 f"{ratio.name!r} is the name of a parameter of the catalogue, and this ratio is another; give it a "
                 "name of its own"

@@ -157,6 +157,10 @@ def test_more_bad_requests():
         br.mafic_depth(soil(FIVE), shoulder=800)
     with pytest.raises(ValueError, match="no band within 15 nm of 750 nm"):
         br.mafic_depth(soil([480, 600, 700, 830]), shoulder=750)
+    with pytest.raises(ValueError, match="mafic_depth: no band within 15 nm of 830 nm"):
+        br.named_ratio("mafic_depth", [480, 600, 750])
+    with pytest.raises(ValueError, match="'mafic_depth' is the name of a parameter of the catalogue"):
+        br.parameters(soil(FIVE), names={"mafic_depth": "red_slope"})
     with pytest.raises(ValueError, match="a gradient runs from a shorter to a longer wavelength"):
         catalogue.gradient_ratio(700, 600)
     with pytest.raises(ValueError, match="red_slope: no band within 15 nm of 600 nm"):
