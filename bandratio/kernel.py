@@ -66,8 +66,9 @@ class RatioTable:
 class NoiseTable:
     """Variance of each band as a quadratic of its reflectance, random and shared apart.
 
-    ``random_j = constant + linear·max(R, 0) + square·R²``; ``shared_j`` has no linear part. Columns of
-    `random` and `shared`, each of shape (band, 3), are constant, linear and square.
+    ``random_j = f²·constant + f·linear·max(R, 0) + square·R²``, with f the brightness factor, one unless given;
+    ``shared_j`` has no linear part. Columns of `random` and `shared`, each of shape (band, 3), are constant, linear and
+    square.
     """
 
     random: NDArray[np.float64]
@@ -105,6 +106,7 @@ def evaluate(
     *,
     random_map: NDArray | None = None,
     pixel_gain: NDArray | None = None,
+    brightness_factor: NDArray | None = None,
     parts: bool = False,
     threads: int = 1,
     out: NDArray | None = None,
@@ -123,6 +125,9 @@ def evaluate(
         Random noise of each pixel [reflectance], in place of the table's constant.
     pixel_gain : ndarray, shape (pixel,), optional
         Gain error common to the bands of a pixel, new in each pixel [1]; a random part.
+    brightness_factor : ndarray, shape (1 or band, pixel), optional
+        What each reflectance was multiplied by since it was measured [1]; the constant part of each variance grows
+        with its square, the linear one with it.
     parts : bool
         Also give the random and the shared sigma.
     threads : int
@@ -144,6 +149,8 @@ def evaluate(
     has_map = random_map is not None
     per_pixel = np.empty((1, 1), reflectance.dtype) if random_map is None else random_map
     gain = np.empty(0, np.float32) if pixel_gain is None else pixel_gain
+    has_factor = brightness_factor is not None
+    factor = np.empty((0, 0), reflectance.dtype) if brightness_factor is None else brightness_factor
     fixed = (
         ratios.first, ratios.band, ratios.n, ratios.d, ratios.n0, ratios.d0, ratios.scale,
         noise.random, noise.shared, noise.common_gain,
@@ -153,8 +160,9 @@ def evaluate(
         # a copy of one stretch is cheap, of the whole cube it is not: strided input is copied here
         part = np.ascontiguousarray(reflectance[:, start:stop])
         part_map = np.ascontiguousarray(per_pixel[:, start:stop], dtype=part.dtype) if has_map else per_pixel
-        part_gain = np.ascontiguousarray(gain[start:stop])
-        _loop(part, *fixed, has_map, part_map, part_gain, out, start)
+        part_gain = np.ascontiguousarray(gain[start:stop], dtype=part.dtype)
+        part_factor = np.ascontiguousarray(factor[:, start:stop], dtype=part.dtype) if has_factor else factor
+        _loop(part, *fixed, has_map, part_map, part_gain, part_factor, out, start)
 
     threads = max(1, min(threads, pixels // _THREAD_PIXELS))
     if threads == 1 and reflectance.flags.c_contiguous:
@@ -184,6 +192,7 @@ def _loop(  # type: ignore[no-untyped-def]
     has_map,
     random_map,
     pixel_gain,
+    factor,
     out,
     offset,
 ):
@@ -197,12 +206,18 @@ def _loop(  # type: ignore[no-untyped-def]
     for start in range(0, pixels, _BLOCK):
         m = min(_BLOCK, pixels - start)
         stop = start + m
-        if planes > 1:
+        if planes > 1 and factor.shape[0] == 0:
             _band_variances(reflectance, start, stop, first_natures, var_random)
             if has_map:
                 _add_map(random_map, start, stop, var_random)
             if planes == 4:
                 _band_variances(reflectance, start, stop, shared, var_shared)
+        elif planes > 1:
+            _scaled_variances(reflectance, factor, start, stop, first_natures, var_random)
+            if has_map:
+                _add_scaled_map(random_map, factor, start, stop, var_random)
+            if planes == 4:
+                _scaled_variances(reflectance, factor, start, stop, shared, var_shared)
         here = slice(offset + start, offset + stop)
         for k in range(scale.size):
             terms = slice(first[k], first[k + 1])
@@ -234,6 +249,29 @@ def _band_variances(R, start, stop, coefficients, variance):  # type: ignore[no-
             for i in range(row.size):
                 x = float(row[i])
                 to[i] = a + c * x * x
+
+
+@njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})
+def _scaled_variances(R, factor, start, stop, coefficients, variance):  # type: ignore[no-untyped-def]
+    """As `_band_variances`, where each reflectance was multiplied by a factor since it was measured."""
+    for j in range(R.shape[0]):
+        a, b, c = coefficients[j, 0], coefficients[j, 1], coefficients[j, 2]
+        row, to = R[j, start:stop], variance[j]
+        f = factor[j if factor.shape[0] > 1 else 0, start:stop]
+        for i in range(row.size):
+            x, k = float(row[i]), float(f[i])
+            to[i] = k * (k * a + b * max(x, 0.0)) + c * x * x
+
+
+@njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})
+def _add_scaled_map(random_map, factor, start, stop, variance):  # type: ignore[no-untyped-def]
+    for j in range(variance.shape[0]):
+        row = random_map[j if random_map.shape[0] > 1 else 0, start:stop]
+        f = factor[j if factor.shape[0] > 1 else 0, start:stop]
+        to = variance[j]
+        for i in range(row.size):
+            x = float(row[i]) * float(f[i])
+            to[i] += x * x
 
 
 @njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})

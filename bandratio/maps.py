@@ -87,14 +87,15 @@ def parameters(
             f"the bands {listed(centres.tolist(), 'nm')} allow no parameter of the catalogue; give names=… with "
             "BandRatio objects"
         )
-    for name in ratios:
+    suffixes = list(PARTS)[: 1 if noise is None else 4 if parts else 2]
+    for name in (name + suffix for name in ratios for suffix in suffixes):
         if name in cube.dims or name in cube.coords:
             raise ValueError(
-                f"{name!r} is the name of one of the cube's coordinates; give the ratio another name"
+                f"{name!r} is the name of one of the cube's coordinates; give the ratio another name, or rename the "
+                "coordinate"
             )
 
     planes = _planes(cube, noise, list(ratios.values()), centres, tolerance, parts)
-    suffixes = list(PARTS)[: planes.shape[1]]
     dims = tuple(dim for dim in cube.dims if dim != "wavelength")
     coords = {name: c for name, c in cube.coords.items() if "wavelength" not in c.dims}
     variables = {}
@@ -152,22 +153,16 @@ def _planes(
     from .kernel import NoiseTable, RatioTable, cores
 
     table = RatioTable.build(ratios, centres, tolerance)
-    noises, random_map, gain = None, None, None
+    noises, per_pixel = None, {}
     if noise is not None:
         band = noise.for_cube(cube, tolerance)
         noises = _noise_table(band, NoiseTable)
         if noise.random_is_map:
-            dims = [dim for dim in cube.dims if dim != "wavelength"]
-            random_map = (
-                band.random if "wavelength" in band.random.dims else band.random.expand_dims("wavelength")
-            )
-            missing = {dim: cube.sizes[dim] for dim in dims if dim not in random_map.dims}
-            random_map = random_map.expand_dims(missing).transpose("wavelength", *dims)
-        if isinstance(band.pixel_gain, xr.DataArray):
-            gain = band.pixel_gain.expand_dims("wavelength")
-    per_pixel = {
-        name: plane for name, plane in (("random_map", random_map), ("pixel_gain", gain)) if plane is not None
-    }
+            per_pixel["random_map"] = _like_the_cube(band.random, cube)
+        for name in ("pixel_gain", "brightness_factor"):
+            plane = getattr(band, name)
+            if isinstance(plane, xr.DataArray):
+                per_pixel[name] = _like_the_cube(plane, cube)
     if is_lazy(cube) or any(is_lazy(plane) for plane in per_pixel.values()):
         return _lazy_planes(cube, table, noises, per_pixel, parts)
     in_memory = [plane.values for plane in per_pixel.values()]
@@ -179,6 +174,14 @@ def _planes(
         noises=noises,
         parts=parts,
         threads=cores(),
+    )
+
+
+def _like_the_cube(plane: xr.DataArray, cube: xr.DataArray) -> xr.DataArray:
+    """A plane with the cube's dimensions in their order; `wavelength` has length 1 where it had none."""
+    sizes = {dim: cube.sizes[dim] for dim in cube.dims if dim not in plane.dims}
+    return plane.expand_dims({**sizes, "wavelength": 1} if "wavelength" in sizes else sizes).transpose(
+        *cube.dims
     )
 
 
@@ -248,6 +251,7 @@ def _block(
         noises,
         random_map=flat.get("random_map"),
         pixel_gain=None if gain is None else gain[0],
+        brightness_factor=flat.get("brightness_factor"),
         parts=parts,
         threads=threads,
     )

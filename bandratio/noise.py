@@ -16,7 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 from ._checks import listed, non_negative, suggestion
 from .bands import TOLERANCE_NM, nearest_band, values_per_band
 
-__all__ = ["BandNoise", "Noise", "PerBand"]
+__all__ = ["BandNoise", "Noise", "PerBand", "brightness_factor_of"]
 
 #: A number for all bands, {nm: value}, a DataArray on wavelength, or a list of the cube's length.
 PerBand: TypeAlias = "float | Mapping[float, float] | xr.DataArray | ArrayLike"
@@ -31,7 +31,9 @@ class BandNoise:
 
     `random` may have the cube's other dimensions too. `pixel_gain` has them without `wavelength`, or is zero: the
     cube's own coordinate of that name, a gain error common to the bands of a pixel and new in each pixel, which
-    `normalise` puts there.
+    `normalise` puts there. `brightness_factor` f has the pixels' dimensions, with or without `wavelength`, or is one: the
+    cube's own coordinate of that name, by which each reflectance was multiplied since it was measured. Where it is
+    alike in all pixels, `random`, `shot` and `band_offset` are already those of the cube as it is now, and it is one.
     """
 
     random: xr.DataArray
@@ -41,6 +43,22 @@ class BandNoise:
     shot: xr.DataArray
     common_gain: float
     pixel_gain: xr.DataArray | float = 0.0
+    brightness_factor: xr.DataArray | float = 1.0
+
+    def random_variance(self, R: xr.DataArray) -> xr.DataArray:
+        """Variance of each band's reflectance that is new in every pixel: ``(f·random)² + f·shot²·R + (relative·R)²``.
+
+        Photon noise of the reflectance R/f that was measured, times f², is f·shot²·R; below zero there is none.
+        """
+        f = self.brightness_factor
+        return (f * self.random) ** 2 + f * self.shot**2 * R.clip(min=0) + (self.relative * R) ** 2
+
+    def shared_variance(self, R: xr.DataArray) -> xr.DataArray:
+        """Variance of each band's reflectance that all pixels share: ``(band_gain·R)² + (f·band_offset)²``.
+
+        The common gain is not in it: it moves all bands together.
+        """
+        return (self.band_gain * R) ** 2 + (self.brightness_factor * self.band_offset) ** 2
 
 
 @dataclass(frozen=True, eq=False)
@@ -64,6 +82,12 @@ class Noise:
     A third nature comes with the cube, not from here: the error of a photometric normalisation is common to the
     bands of a pixel and new in each pixel. `normalise` leaves it on the cube as the coordinate `pixel_gain` [1]; like
     `common_gain` it cancels in a pure ratio, and like `random` it averages away.
+
+    All of it is stated **for the cube as it came**, before `normalise` and `convert_quantity`. These multiply each
+    reflectance, and with it the errors that are no fraction of it, by a factor f that they leave on the cube as the
+    coordinate `brightness_factor` [1]; ``random`` and ``band_offset`` then count f times, ``shot``² f times at the new
+    level. Where an error is known at the cube's present level instead, drop that coordinate
+    (``cube.drop_vars("brightness_factor")``).
 
     **The classic mistake** is to enter a calibration report's "relative accuracy" as `relative`. It is one
     unknown number for each band, the same in every pixel: enter it as `band_gain`.
@@ -135,6 +159,8 @@ class Noise:
         for name in header:
             if name not in known:
                 raise ValueError(f"{path}: unknown column {name!r}{suggestion(name, known)}")
+        if len(set(header)) != len(header):
+            raise ValueError(f"{path}: a column stands twice in {listed(header)}")
         if len(rows) < 2:
             raise ValueError(f"{path}: no rows below the header; wanted one row per band")
         columns: dict[str, list[float]] = {name: [] for name in header}
@@ -166,7 +192,8 @@ class Noise:
         Parameters
         ----------
         cube : DataArray
-            Reflectance with a `wavelength` dimension [nm].
+            Reflectance with a `wavelength` dimension [nm]; its coordinates `pixel_gain` and `brightness_factor` are
+            taken along, where there are any.
         tolerance : float
             Largest distance between a band's centre and the wavelength of a value [nm].
 
@@ -186,8 +213,26 @@ class Noise:
             parts["random"] = _map_for_cube(self.random, cube, centres, tolerance)
         gain: xr.DataArray | float = 0.0
         if "pixel_gain" in cube.coords:
+            if "wavelength" in cube.coords["pixel_gain"].dims:
+                raise ValueError(
+                    "the cube's pixel_gain is common to the bands of a pixel; it must not have wavelength"
+                )
             gain = cube.coords["pixel_gain"].reset_coords(drop=True)
-        return BandNoise(**parts, common_gain=self.common_gain, pixel_gain=gain)
+        factor = self._factor(cube)
+        if isinstance(factor, xr.DataArray) and not set(factor.dims) - {"wavelength"}:
+            # alike in all pixels: what is known per band stays so
+            parts["random"] = factor * parts["random"]
+            parts["shot"] = factor**0.5 * parts["shot"]
+            parts["band_offset"] = factor * parts["band_offset"]
+            factor = 1.0
+        return BandNoise(**parts, common_gain=self.common_gain, pixel_gain=gain, brightness_factor=factor)
+
+    def _factor(self, cube: xr.DataArray) -> xr.DataArray | float:
+        """The cube's `brightness_factor`, one where no part of this noise depends on it."""
+        parts = (self.random, self.shot, self.band_offset)
+        if not any(_is_there(part) for part in parts):
+            return 1.0
+        return brightness_factor_of(cube)
 
     @property
     def random_is_map(self) -> bool:
@@ -217,6 +262,21 @@ class Noise:
         if self.shared_within is not None:
             told["shared_within"] = "labels"
         return json.dumps(told)
+
+
+def brightness_factor_of(cube: xr.DataArray) -> xr.DataArray | float:
+    """What a cube's reflectances were multiplied by since they were measured [1]; one where nothing says so."""
+    if "brightness_factor" not in cube.coords:
+        return 1.0
+    factor = cube.coords["brightness_factor"].reset_coords(drop=True)
+    return factor.transpose("wavelength", ...) if "wavelength" in factor.dims else factor
+
+
+def _is_there(part: Any) -> bool:
+    """False where a part is zero in all bands."""
+    if isinstance(part, xr.DataArray):
+        return set(part.dims) != {"wavelength"} or bool(part.any())
+    return any(part.values()) if isinstance(part, Mapping) else bool(np.any(part))
 
 
 def _checked(part: str, value: Any) -> Any:
@@ -289,8 +349,26 @@ def _map_for_cube(
             raise ValueError(
                 f"random is a map of {dict(random.sizes)}, which does not fit the cube's {dict(cube.sizes)}"
             )
+        if dim != "wavelength" and not _same_places(random, cube, str(dim)):
+            raise ValueError(
+                f"random is a map whose {dim} coordinates are not the cube's; reindex it to the cube, or drop them where "
+                "its pixels are the cube's"
+            )
+    # the places are the same, so the cube's coordinates serve; others would be aligned to them digit by digit
+    others = [dim for dim in random.dims if dim != "wavelength" and dim in random.coords]
+    random = random.reset_coords(drop=True).drop_vars(others)
     if "wavelength" not in random.dims:
         return random
     given = random["wavelength"].values
     order = [nearest_band(given, centre, tolerance) for centre in centres]
     return random.isel(wavelength=order).assign_coords(wavelength=centres)
+
+
+def _same_places(random: xr.DataArray, cube: xr.DataArray, dim: str) -> bool:
+    if dim not in random.coords or dim not in cube.coords:
+        return True
+    given, wanted = random[dim].values, cube[dim].values
+    if given.dtype.kind not in "fiu" or wanted.dtype.kind not in "fiu":
+        return bool(np.array_equal(given, wanted))
+    step = float(np.abs(np.diff(wanted.astype(float))).min()) if wanted.size > 1 else 1.0
+    return bool((np.abs(given.astype(float) - wanted) <= 0.01 * step).all())

@@ -177,3 +177,13 @@ def test_import_is_light():
 def test_every_public_name_is_there_and_documented():
     for name in br.__all__:
         assert getattr(br, name).__doc__, name
+
+
+@pytest.mark.parametrize("name", ["red_slope", "red_slope_sigma"])
+def test_a_coordinate_may_not_be_called_like_a_map(name):
+    """As a dimension it would take the place of the sigma without a word."""
+    cube = br.as_cube(np.full((2, 3), 0.2), [600, 700])
+    for clashing in (cube.assign_coords({name: 1.0}), cube.rename(sample=name)):
+        with pytest.raises(ValueError, match=f"'{name}' is the name of one of the cube's coordinates; give"):
+            br.parameters(clashing, br.Noise(random=0.1))
+    assert "red_slope" in br.parameters(cube.assign_coords(red_slope_sigma=1.0))

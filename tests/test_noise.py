@@ -150,3 +150,52 @@ def test_describe_tells_what_was_given():
         "random": [0.1, 0.2], "band_gain": 0.01, "common_gain": 0.05, "shared_within": "labels",
     }  # fmt: skip
     assert br.Noise().describe() == "{}"
+
+
+def test_a_map_of_random_must_lie_where_the_cube_lies():
+    """The compiled loop goes by position and the readable path by coordinates: both must mean the same pixel."""
+    rng = np.random.default_rng(4)
+    cube = br.as_cube(rng.uniform(0.1, 0.5, (1, 3, 4)), [700]).assign_coords(
+        y=[30.0, 20, 10], x=[0.0, 10, 20, 30]
+    )
+    level = br.BandRatio({700: 1}, name="level")
+    random = xr.DataArray(rng.uniform(0.001, 0.01, (3, 4)), dims=("y", "x"))
+    for placed in (random, random.assign_coords(y=[30.0000001, 20, 10])):
+        noise = br.Noise(random=placed)
+        np.testing.assert_allclose(br.parameters(cube, noise, [level]).level_sigma, random)
+        np.testing.assert_allclose(level.sigma(cube, noise), random)
+    upside_down = br.Noise(random=random.assign_coords(y=[10.0, 20, 30]))
+    with pytest.raises(
+        ValueError, match="random is a map whose y coordinates are not the cube's; reindex it"
+    ):
+        br.parameters(cube, upside_down, [level])
+    samples = br.as_cube([[0.1, 0.2]], [700]).assign_coords(sample=["a", "b"])
+    named = xr.DataArray([0.01, 0.02], {"sample": ["b", "a"]}, ("sample",))
+    with pytest.raises(ValueError, match="random is a map whose sample coordinates are not the cube's"):
+        level.sigma(samples, br.Noise(random=named))
+
+
+@pytest.mark.parametrize("lazy", [False, True])
+@pytest.mark.parametrize("dims", [(), ("y",), ("x",), ("x", "y")])
+def test_a_pixel_gain_may_have_some_of_the_dimensions(dims, lazy):
+    cube = br.as_cube(np.full((1, 3, 3), 0.5), [700])
+    gain = xr.DataArray(np.random.default_rng(5).uniform(0, 0.1, (3,) * len(dims)), dims=dims)
+    cube = cube.assign_coords(pixel_gain=gain)
+    level = br.BandRatio({700: 1}, name="level")
+    maps = br.parameters(cube.chunk(y=2) if lazy else cube, br.Noise(), [level])
+    expected = (0.5 * gain).broadcast_like(cube[0]).transpose("y", "x")
+    np.testing.assert_allclose(maps.level_sigma, expected)
+    np.testing.assert_allclose(level.sigma(cube, br.Noise()), expected)
+
+
+def test_a_pixel_gain_has_no_wavelength():
+    cube = br.as_cube([0.1, 0.2], [600, 700]).assign_coords(pixel_gain=("wavelength", [0.1, 0.2]))
+    with pytest.raises(ValueError, match="pixel_gain is common to the bands of a pixel"):
+        br.parameters(cube, br.Noise())
+
+
+def test_a_column_given_twice(tmp_path):
+    path = tmp_path / "noise.csv"
+    path.write_text("wavelength,random,random\n480,0.1,0.2\n")
+    with pytest.raises(ValueError, match="a column stands twice in wavelength, random, random"):
+        br.Noise.from_csv(path)
