@@ -59,14 +59,17 @@ def fan_p_value(outside_sigma: ArrayLike, fan_angle: ArrayLike) -> NDArray[np.fl
     """
     from ._hull_loop import fan_loop
 
-    d, angle = np.broadcast_arrays(np.asarray(outside_sigma, dtype=float), np.asarray(fan_angle, dtype=float))
+    given = [np.asarray(values, dtype=float) for values in (outside_sigma, fan_angle)]
+    d, angle = _flattened(given)
     wrong = (angle < 0) | (angle > 2 * np.pi * (1 + 1e-12))
     if wrong.any():
         raise ValueError(f"fan_angle must lie between 0 and 2π radian, got {angle[wrong][0]:g}")
-    p = np.empty(d.shape)
-    fan_loop(np.ravel(d), np.ravel(angle), p.reshape(-1))
-    whole = angle >= 2 * np.pi
-    return np.where(whole & (d > 0), np.exp(-(d**2) / 2), p)
+    p = np.empty(d.size)
+    fan_loop(d, angle, p)
+    whole = (angle >= 2 * np.pi) & (d > 0)
+    return np.where(whole, np.exp(-(d**2) / 2), p).reshape(
+        np.broadcast_shapes(*(each.shape for each in given))
+    )
 
 
 @dataclass(frozen=True)
@@ -122,16 +125,14 @@ class Points:
         ValueError
             If an error is negative, or a covariance larger than the two sigmas allow.
         """
-        arrays = np.broadcast_arrays(
-            *(
-                np.asarray(value, dtype=float)
-                for value in (
-                    red, infrared, sigma_red, sigma_infrared, covariance, relative_red, relative_infrared,
-                    gain_sigma, incidence_deg, infrared_limit,
-                )
+        arrays = [
+            np.asarray(value, dtype=float)
+            for value in (
+                red, infrared, sigma_red, sigma_infrared, covariance, relative_red, relative_infrared,
+                gain_sigma, incidence_deg, infrared_limit,
             )
-        )  # fmt: skip
-        a, b, s_a, s_b, cov, r_a, r_b, gain, incidence, limit = (np.ravel(array) for array in arrays)
+        ]  # fmt: skip
+        a, b, s_a, s_b, cov, r_a, r_b, gain, incidence, limit = _flattened(arrays)
         named = (
             ("sigma_red", s_a), ("sigma_infrared", s_b), ("relative_red", r_a), ("relative_infrared", r_b),
             ("gain_sigma", gain), ("infrared_limit", limit),
@@ -148,8 +149,8 @@ class Points:
             )
         dropout = (np.isnan(b) | (b < limit)) & ~np.isnan(limit)
         return cls(
-            np.ascontiguousarray(a), np.where(dropout, limit, b), s_a**2, s_b**2, np.ascontiguousarray(cov), r_a**2,
-            r_b**2 + gain**2, np.ascontiguousarray(incidence), dropout,
+            a, np.where(dropout, limit, b), s_a**2, s_b**2, cov, r_a**2,
+            r_b**2 + gain**2, incidence, dropout,
         )  # fmt: skip
 
     def __len__(self) -> int:
@@ -165,6 +166,13 @@ class Points:
             self.red, self.infrared, self.var_red, self.var_infrared, self.covariance, self.scaled_red,
             self.scaled_infrared,
         )  # fmt: skip
+
+
+def _flattened(arrays: list[Floats]) -> list[Floats]:
+    """Arrays of one length, one-dimensional and writeable: one kind for the compiled loops."""
+    shape = np.broadcast_shapes(*(array.shape for array in arrays))
+    full = [array if array.shape == shape else np.broadcast_to(array, shape).copy() for array in arrays]
+    return [np.require(array.reshape(-1), requirements=["C", "W"]) for array in full]
 
 
 def over_blocks(work: Callable[[int, int], Any], size: int, threads: int | None = None) -> None:
