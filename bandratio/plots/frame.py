@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from contextlib import AbstractContextManager
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -37,23 +38,31 @@ PALETTE = {
 }
 
 
-def style() -> AbstractContextManager[Any]:
+@contextmanager
+def style() -> Iterator[None]:
     """Settings of a figure at publication size, for a ``with`` block."""
     import matplotlib as mpl
 
-    return mpl.rc_context(
-        {
-            "font.size": 8,
-            "axes.titlesize": 8,
-            "axes.linewidth": 0.6,
-            "xtick.major.width": 0.6,
-            "ytick.major.width": 0.6,
-            "legend.fontsize": 7,
-            "legend.frameon": False,
-            "figure.dpi": 150,
-            "savefig.dpi": 300,
-        }
-    )
+    interactive = mpl.is_interactive()
+    try:
+        with mpl.rc_context(
+            {
+                "font.size": 8,
+                "axes.titlesize": 8,
+                "axes.linewidth": 0.6,
+                "xtick.major.width": 0.6,
+                "ytick.major.width": 0.6,
+                "legend.fontsize": 7,
+                "legend.frameon": False,
+                "figure.dpi": 150,
+                "savefig.dpi": 300,
+            }
+        ):
+            yield
+            # a notebook's way to show figures switches this on with the first one; it must outlast the block
+            interactive = mpl.is_interactive()
+    finally:
+        mpl.interactive(interactive)
 
 
 def new_axes(count: int = 1, *, width: float = COLUMN_INCHES, height: float = 3.0) -> Any:
