@@ -116,14 +116,8 @@ def _log_variance(cube: xr.DataArray, noise: Noise | None) -> NDArray[np.float64
     if noise is None:
         return np.zeros(cube.shape)
     band = noise.for_cube(cube)
-    parts = (
-        part.values for part in (band.random, band.shot, band.relative, band.band_gain, band.band_offset)
-    )
-    random, shot, relative, band_gain, band_offset = parts
-    R = cube.values
-    variance: NDArray[np.float64] = (
-        (random**2 + shot**2 * R + band_offset**2) / R**2 + relative**2 + band_gain**2
-    )
+    relative = (band.random_variance(cube) + band.shared_variance(cube)) / cube**2
+    variance: NDArray[np.float64] = relative.transpose(*cube.dims).values
     return variance
 
 
