@@ -144,29 +144,26 @@ def convex_hull(points: ArrayLike) -> Hull:
     >>> convex_hull([[0, 0], [2, 0], [0, 2], [1, 1], [0.5, 0.5]]).vertices.tolist()
     [[0.0, 0.0], [2.0, 0.0], [0.0, 2.0]]
     """
-    from scipy.spatial import ConvexHull, QhullError
+    from scipy.spatial import ConvexHull
 
     cloud = np.asarray(points, dtype=float)
     if cloud.ndim != 2 or cloud.shape[1] != 2:
         raise ValueError(f"points of a hull must have shape (point, 2), got {cloud.shape}")
     if not np.isfinite(cloud).all():
         raise ValueError("points of a hull must be finite")
-    cloud = np.unique(np.round(cloud / _ONE_POINT), axis=0) * _ONE_POINT
-    if len(cloud) < 2:
+    far = cloud - cloud[:1]
+    longest = far[np.argmax((far**2).sum(axis=1))] if len(far) else np.zeros(2)
+    if np.hypot(*longest) < 2 * _ONE_POINT:
         raise ValueError("a hull needs at least two different points")
-    far = cloud - cloud[0]
-    longest = far[np.argmax((far**2).sum(axis=1))]
     off_line = far @ np.array([-longest[1], longest[0]]) / np.hypot(*longest)
-    if np.max(np.abs(off_line)) < 2 * _ONE_POINT:
+    if np.max(np.abs(off_line)) < 4 * _ONE_POINT:  # what rounding leaves of a line
         along = far @ longest
         corners = cloud[[np.argmin(along), np.argmax(along)]]
     else:
-        try:
-            corners = cloud[ConvexHull(cloud).vertices]
-        except (
-            QhullError
-        ) as error:  # pragma: no cover - points off a line by more than the rounding have a hull
-            raise ValueError(f"no hull could be built from these {len(cloud)} points: {error}") from None
+        # first the few corners of the many points, then those of them that are different points
+        few = cloud[ConvexHull(cloud).vertices]
+        few = np.unique(np.round(few / _ONE_POINT), axis=0) * _ONE_POINT
+        corners = few[ConvexHull(few).vertices]
         corners = np.roll(corners, -np.lexsort((corners[:, 0], corners[:, 1]))[0], axis=0)
     sides = np.roll(corners, -1, axis=0) - corners
     normals = np.column_stack([sides[:, 1], -sides[:, 0]]) / np.hypot(*sides.T)[:, None]

@@ -206,7 +206,7 @@ def _by_name(
         raise ValueError(f"{argument} names no known material: {word!r}{suggestion(word, known)}") from None
     if argument == "ice_free" and (chosen & ice).any():
         raise ValueError(f"{word!r} is ice, and cannot be ice-free ground; name it in ice=…")
-    if argument == "ice" and not (chosen & ice).all():
+    if argument == "ice" and (chosen & ~ice).any():
         raise ValueError(f"{word!r} is no ice in the reference table; give its albedos if it is")
     return _from_table(_at_lasers(table, chosen))
 
