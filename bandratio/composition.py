@@ -351,8 +351,7 @@ def _covariances(
         used |= np.any(ratio.weights_for(cube["wavelength"].values), axis=0)
     band = noise.for_cube(cube)
     R = cube.astype(float)
-    var = band.random**2 + band.shot**2 * R.clip(min=0) + (band.relative * R) ** 2
-    var = (var + (band.band_gain * R) ** 2 + band.band_offset**2).isel(wavelength=used)
+    var = (band.random_variance(R) + band.shared_variance(R)).isel(wavelength=used)
     R = R.isel(wavelength=used)
     g, h = (ratio.gradient(cube).isel(wavelength=used) for ratio in (first, second))
     along_g, along_h = ((each * R).sum("wavelength", skipna=False) for each in (g, h))
