@@ -58,6 +58,7 @@ from .plots import (
 from .pyroclastic import pyroclastic_flags
 from .ratio import BandRatio
 from .regions import candidate_regions, candidate_table, region_means
+from .report import write_report
 from .spectra import band_average, effective_wavelength, open_library, reference_spectra
 
 __version__: str

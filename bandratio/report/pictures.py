@@ -1,0 +1,188 @@
+"""The scene made small enough for a page: pictures of every parameter, and points for selection."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+import xarray as xr
+from numpy.typing import NDArray
+
+from ..plots.frame import Grid, parameter_names, require_plane
+from ..plots.maps import flag_meanings
+from ..plots.resampling import picture_of, picture_step
+
+__all__ = ["PageData", "page_data"]
+
+#: Bytes of pictures on a page; with the points and the libraries it stays below 15 MB.
+_PICTURE_BYTES = 7_000_000
+_MOST_PICTURE_PIXELS = 250_000
+_POINTS = 12_000
+_CANDIDATE_POINTS = 8_000
+
+
+#: What the views show at first, where it is there.
+_FIRST = ("reflectance_700", "red_slope")
+
+
+@dataclass(frozen=True)
+class PageData:
+    """What the page shows, in memory.
+
+    Parameters
+    ----------
+    names : list of str
+        Parameters.
+    planes : dict of str to ndarray, shape (row, column)
+        Picture of each parameter and of its sigma, lowest coordinates first.
+    flag : ndarray of int or None
+        Picture of the flags.
+    words : dict of int to str
+        Word of each flag.
+    extent : tuple of float
+        Left, right, bottom, top, in the units of the axes.
+    axes : tuple of str
+        Names of the axes with their units.
+    step : int
+        Side of the square of pixels that was averaged.
+    shape : tuple of int
+        Rows and columns of the scene.
+    points : DataFrame
+        Pixels that can be selected: ``x``, ``y``, ``v0``, ``s0``, …, ``flag``, ``region``.
+    candidates_left_out : int
+        Candidate pixels that are not among the points.
+    counts : dict of str to int
+        Pixels of each flag, in the whole scene.
+    """
+
+    names: list[str]
+    planes: dict[str, NDArray]
+    flag: NDArray | None
+    words: dict[int, str]
+    extent: tuple[float, float, float, float]
+    axes: tuple[str, str]
+    step: int
+    shape: tuple[int, int]
+    points: pd.DataFrame
+    candidates_left_out: int
+    counts: dict[str, int]
+
+    @property
+    def shown(self) -> tuple[int, int]:
+        """Indices of the two parameters that the views show at first."""
+        if all(name in self.names for name in _FIRST):
+            return self.names.index(_FIRST[0]), self.names.index(_FIRST[1])
+        return 0, min(1, len(self.names) - 1)
+
+
+def page_data(maps: xr.Dataset, flags: xr.Dataset | None, labels: xr.DataArray | None) -> PageData:
+    """Pictures and points of the maps, from one pass over each of them."""
+    names = [name for name in parameter_names(maps) if maps[name].ndim == 2]
+    first = require_plane(maps, names[0])
+    dims, shape = first.dims, (first.shape[0], first.shape[1])
+    names = [name for name in names if set(maps[name].dims) == set(dims) and maps[name].sizes == first.sizes]
+    columns = [column for name in names for column in (name, f"{name}_sigma") if column in maps]
+    budget = min(_MOST_PICTURE_PIXELS, int(_PICTURE_BYTES / (len(columns) * 4 * 4 / 3 + 12)))
+    step = picture_step(shape, budget)
+    grid = Grid.of(first)
+    flip = tuple(
+        slice(None, None, -1) if falls else slice(None)
+        for falls in (grid.extent[2] > grid.extent[3], grid.extent[0] > grid.extent[1])
+    )
+    if grid.unit != "pixel":
+        flip = tuple(
+            slice(None, None, -1) if dim in first.coords and _falls(first[dim].values) else slice(None)
+            for dim in dims
+        )
+    planes = {
+        column: np.ascontiguousarray(
+            picture_of(maps[column].transpose(*dims), step).to_numpy()[flip], dtype=np.float32
+        )
+        for column in columns
+    }
+    flag = None if flags is None else flags["flag"].transpose(*dims)
+    words = {} if flag is None else flag_meanings(flag)
+    whole_flag = None if flag is None else np.asarray(flag.values)
+    picture = None
+    if flag is not None:
+        picture = np.ascontiguousarray(picture_of(flag.copy(data=whole_flag), step).to_numpy()[flip])
+    scale, axes = _axes(grid, dims)
+    left, right, bottom, top = (edge * scale for edge in grid.extent)
+    points, left_out = _points(maps, names, whole_flag, words, labels, scale)
+    counts = {} if whole_flag is None else {
+        word: int((whole_flag == code).sum()) for code, word in words.items()
+    }  # fmt: skip
+    return PageData(
+        names,
+        planes,
+        picture,
+        words,
+        (left, right, bottom, top),
+        axes,
+        step,
+        shape,
+        points,
+        left_out,
+        counts,
+    )
+
+
+def _falls(values: NDArray) -> bool:
+    return bool(values.size > 1 and values[0] > values[-1])
+
+
+def _axes(grid: Grid, dims: tuple[object, ...]) -> tuple[float, tuple[str, str]]:
+    if grid.unit == "m":
+        longest = (
+            max(abs(grid.extent[1] - grid.extent[0]), abs(grid.extent[3] - grid.extent[2])) * grid.metres
+        )
+        unit, length = ("km", 1000.0) if longest >= 2000 else ("m", 1.0)
+        return grid.metres / length, (f"x [{unit}]", f"y [{unit}]")
+    named = {"degree": ("longitude [°]", "latitude [°]"), "pixel": ("column", "row")}
+    return 1.0, named.get(grid.unit, (str(dims[1]), str(dims[0])))
+
+
+def _points(
+    maps: xr.Dataset,
+    names: list[str],
+    flag: NDArray | None,
+    words: dict[int, str],
+    labels: xr.DataArray | None,
+    scale: float,
+) -> tuple[pd.DataFrame, int]:
+    """Pixels spread evenly over the scene, and the candidates, all of them where they are few."""
+    first = maps[names[0]]
+    rows, columns = first.shape
+    step = max(1, math.ceil(math.sqrt(rows * columns / _POINTS)))
+    row, column = (axis.ravel() for axis in np.mgrid[step // 2 : rows : step, step // 2 : columns : step])
+    left_out = 0
+    if flag is not None:
+        codes = [code for code, word in words.items() if word.endswith("candidate")]
+        found_row, found_column = np.nonzero(np.isin(flag, codes))
+        if found_row.size > _CANDIDATE_POINTS:
+            chosen = np.linspace(0, found_row.size - 1, _CANDIDATE_POINTS).astype(int)
+            left_out = found_row.size - _CANDIDATE_POINTS
+            found_row, found_column = found_row[chosen], found_column[chosen]
+        flat = np.unique(np.concatenate([row * columns + column, found_row * columns + found_column]))
+        row, column = flat // columns, flat % columns
+    y, x = first.dims
+    table = {
+        "x": (first[x].to_numpy()[column] if x in first.coords else column).astype(float) * scale,
+        "y": (first[y].to_numpy()[row] if y in first.coords else row).astype(float) * scale,
+    }
+    at = {y: xr.DataArray(row, dims="point"), x: xr.DataArray(column, dims="point")}
+    for place, name in enumerate(names):
+        for letter, variable in (("v", name), ("s", f"{name}_sigma")):
+            if variable in maps:
+                table[f"{letter}{place}"] = np.asarray(maps[variable].isel(at).values, dtype=np.float32)
+    table["flag"] = np.full(row.size, -1) if flag is None else flag[row, column].astype(int)
+    table["region"] = (
+        np.zeros(row.size, dtype=int)
+        if labels is None
+        else np.asarray(labels.values)[row, column].astype(int)
+    )
+    frame = pd.DataFrame(table)
+    whole = np.isfinite(frame["v0"].to_numpy())
+    return frame[whole].reset_index(drop=True), left_out

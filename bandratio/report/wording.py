@@ -1,0 +1,239 @@
+"""The page's texts: question and answer, cautions, tables, provenance. Everything that comes from a file is escaped."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable, Sequence
+from html import escape
+from typing import Any
+
+import numpy as np
+import pandas as pd
+import xarray as xr
+
+from .pictures import PageData
+
+__all__ = [
+    "answer_lines", "caution_text", "legend", "parameter_table", "picture_note", "provenance", "region_section",
+    "table_html",
+]  # fmt: skip
+
+#: Rows of a table of regions; the rest is in the file of regions.
+_MOST_ROWS = 500
+
+_READABLE = {
+    "region": "region", "kind": "kind", "n_pixels": "pixels", "area_map": "area [map unit²]",
+    "area_km2": "true area [km²]", "x": "x", "y": "y", "longitude": "longitude [°]", "latitude": "latitude [°]",
+    "expected_false_pixels": "expected false pixels",
+}  # fmt: skip
+
+
+def answer_lines(data: PageData, flags: xr.Dataset | None, table: pd.DataFrame | None) -> list[str]:
+    """Question, answer, and how far it can be relied on: three lines of HTML."""
+    pixels = data.shape[0] * data.shape[1]
+    if flags is None or table is None:
+        size = f"{data.shape[0]:,} × {data.shape[1]:,} pixels"
+        answer = (
+            f"{len(data.names)} parameters over {size}, each with its standard uncertainty where the noise is known; the "
+            "table of parameters has median and typical sigma."
+        )
+        return [
+            "<strong>What do the spectral parameters of this scene look like, and how well are they known?</strong>",
+            answer,
+            "No candidates were flagged: map first, then flag, then make this page with the flags.",
+        ]
+    ice = "ice_candidate" in data.counts
+    subject = "ice" if ice else "a pyroclastic deposit"
+    candidates = {word: count for word, count in data.counts.items() if word.endswith("candidate")}
+    total = sum(candidates.values())
+    told = " and ".join(f"{count:,} {word.replace('_', ' ')}" for word, count in candidates.items() if count)
+    if total == 0:
+        answer = f"Nowhere that can be told from the noise: no pixel of {pixels:,} is a candidate."
+    else:
+        least = table.attrs.get("min_pixels", 1)
+        sizes = f" of {least} pixels or more" if least > 1 else ""
+        answer = (
+            f"{told} pixels of {pixels:,} ({total / pixels:.2%}), in {len(table):,} "
+            f"region{'' if len(table) == 1 else 's'}{sizes}."
+        )
+        if len(table):
+            answer += f" The largest: {_largest(table.iloc[0])}."
+    rate = flags.attrs.get("false_discovery_rate")
+    held = "The flags do not say which false discovery rate they hold."
+    if rate is not None:
+        held = (
+            f"On average at most {100 * float(rate):.3g} % of the candidates are false, if the noise is what was stated "
+            f"({escape(_short(flags.attrs.get('noise', 'not said')))}); {data.counts.get('undecided', 0):,} pixels are undecided."
+        )
+    return [f"<strong>Where does this scene look like {subject}?</strong>", answer, held]
+
+
+def _largest(row: Any) -> str:
+    text: str = f"{int(row['n_pixels']):,} pixels"
+    if "area_km2" in row.index:
+        text += f", {row['area_km2']:.3g} km²"
+    if "longitude" in row.index:
+        return f"{text}, at longitude {row['longitude']:.3f}°, latitude {row['latitude']:.3f}°"
+    return f"{text}, at {row['x']:.6g}, {row['y']:.6g}"
+
+
+def _short(text: Any, longest: int = 240) -> str:
+    text = str(text)
+    return text if len(text) <= longest else text[:longest] + " …"
+
+
+def caution_text(flags: xr.Dataset | None) -> str:
+    """What a reader must not conclude."""
+    if flags is not None and "ice_candidate" in str(flags["flag"].attrs.get("flag_meanings")):
+        return (
+            "Flags are indicators to follow up, never proof of ice. Lasers near 1.5 µm and in the red can blind: where "
+            "one is planned or used, eye safety follows IEC 60825-1, local rules and a licensed laser safety officer."
+        )
+    return (
+        "Flags are indicators to follow up, never proof of a pyroclastic deposit. Bright and flat finds one family only: "
+        "many deposits are dark, and fresh craters are bright too. The promised rate holds on average; errors that all "
+        "pixels share move a whole scene at once."
+    )
+
+
+def picture_note(data: PageData) -> str:
+    """What was left out for the page."""
+    rows, columns = data.shape
+    if data.step > 1:
+        text = (
+            f"The pictures are averaged over {data.step} × {data.step} pixels of {rows:,} × {columns:,} to keep this page "
+            "small (a square with a candidate in it shows as one; sigmas are those of single pixels)."
+        )
+    else:
+        text = f"The pictures show every pixel of {rows:,} × {columns:,}."
+    text += f" {len(data.points):,} pixels can be selected."
+    if data.candidates_left_out:
+        text += f" {data.candidates_left_out:,} candidates are in the pictures and the table, but not among those."
+    return text
+
+
+def legend(data: PageData, colours: dict[str, str]) -> str:
+    """Key of the flags, with how many pixels of the scene have each."""
+    if not data.counts:
+        return ""
+    items = []
+    for word, count in data.counts.items():
+        colour = colours.get(word, "#FFFFFF") if word.endswith("candidate") else "#FFFFFF"
+        items.append(
+            f'<li><span class="swatch" style="background:{colour}"></span>{escape(word.replace("_", " "))}: {count:,}</li>'
+        )
+    return f'<ul class="legend" aria-label="Flags, with their number of pixels">{"".join(items)}</ul>'
+
+
+def table_html(
+    header: Sequence[str],
+    rows: Iterable[Sequence[Any]],
+    *,
+    text_columns: Iterable[int] = (),
+    sortable: bool = False,
+) -> str:
+    """HTML table; numbers keep their full value for sorting. Cells that are tuples hold ready HTML."""
+    texts = set(text_columns)
+    cells = []
+    for place, name in enumerate(header):
+        label = f'<button type="button">{escape(name)}</button>' if sortable and name else escape(name)
+        kind = ' class="text"' if place in texts else ""
+        cells.append(f'<th scope="col"{kind}>{label}</th>' if name else "<td></td>")
+    body = []
+    for row in rows:
+        line = []
+        for place, value in enumerate(row):
+            if isinstance(value, tuple):
+                line.append(f"<td>{value[0]}</td>")
+            elif isinstance(value, (float, np.floating)):
+                shown = f"{value:,.5g}" if np.isfinite(value) else "–"
+                line.append(f'<td data-value="{value if np.isfinite(value) else ""}">{shown}</td>')
+            elif isinstance(value, (int, np.integer)):
+                line.append(f'<td data-value="{value}">{value:,}</td>')
+            else:
+                line.append(f'<td class="{"text" if place in texts else ""}">{escape(str(value))}</td>')
+        body.append(f"<tr>{''.join(line)}</tr>")
+    return f"<table><thead><tr>{''.join(cells)}</tr></thead><tbody>{''.join(body)}</tbody></table>"
+
+
+def region_section(table: pd.DataFrame | None) -> str:
+    """The table of regions, with a button in each row that selects its pixels in the views."""
+    if table is None:
+        return ""
+    heading = '<section aria-labelledby="regions-title"><h2 id="regions-title">Candidate regions</h2>'
+    if len(table) == 0:
+        return f"{heading}<p>There are none.</p></section>"
+    shown = table.head(_MOST_ROWS)
+    note = f"<p>The {len(shown):,} largest of {len(table):,}.</p>" if len(table) > len(shown) else ""
+    header = ["", *(_heading(str(name)) for name in shown.columns)]
+    rows = []
+    for _, row in shown.iterrows():
+        number = int(row["region"])
+        button = f'<button type="button" data-region="{number}" aria-label="select region {number}">select</button>'
+        rows.append([(button,), *(row[name] for name in shown.columns)])
+    body = table_html(header, rows, text_columns=[1 + list(shown.columns).index("kind")], sortable=True)
+    note += (
+        "<p>Expected false pixels: the promised rate, spread evenly; lone pixels are false more often than that, large "
+        "regions less.</p>"
+    )
+    return (
+        f'{heading}{note}<div class="scroll" tabindex="0" role="region" aria-label="Table of candidate regions">{body}</div>'
+        "</section>"
+    )
+
+
+def _heading(column: str) -> str:
+    for ending, readable in (
+        ("_sigma_random", " σ, random part"),
+        ("_sigma_shared", " σ, shared part"),
+        ("_sigma", " σ"),
+    ):
+        if column.endswith(ending):
+            return column.removesuffix(ending) + readable
+    return _READABLE.get(
+        column, column.removesuffix("_spread") + " spread" if column.endswith("_spread") else column
+    )
+
+
+def parameter_table(maps: xr.Dataset, data: PageData) -> str:
+    """Every parameter with its formula, what it is like in the scene, and its source."""
+    header = ["name", "meaning", "unit", "formula", "5 %", "median", "95 %", "typical sigma", "source"]
+    rows = []
+    for name in data.names:
+        attributes = maps[name].attrs
+        values = data.planes[name][np.isfinite(data.planes[name])]
+        low, middle, high = np.percentile(values, [5, 50, 95]) if values.size else (np.nan,) * 3
+        sigma = data.planes.get(f"{name}_sigma")
+        typical = np.nan if sigma is None or not np.isfinite(sigma).any() else float(np.nanmedian(sigma))
+        told = [str(attributes.get(key, "")) for key in ("long_name", "units", "definition")]
+        rows.append(
+            [name, *told, float(low), float(middle), float(high), typical, str(attributes.get("source", ""))]
+        )
+    return table_html(header, rows, text_columns=[0, 1, 2, 3, 8])
+
+
+def provenance(maps: xr.Dataset, flags: xr.Dataset | None, versions: dict[str, str]) -> str:
+    """Noise, thresholds, attributes of the files, and versions, as a list of terms."""
+    told: list[tuple[str, str]] = [("noise", str(maps.attrs.get("noise", "not said in the maps")))]
+    if flags is not None and "thresholds" in flags.attrs:
+        try:
+            for name, limit in json.loads(flags.attrs["thresholds"]).items():
+                sigma = f" ± {limit['sigma']:.3g}" if limit.get("sigma") else ""
+                told.append(
+                    (
+                        f"threshold {name}",
+                        f"{limit['value']:.6g}{sigma}, {limit['origin']}; {limit.get('errors', '')}",
+                    )
+                )
+        except (ValueError, TypeError, KeyError, AttributeError):
+            told.append(("thresholds", str(flags.attrs["thresholds"])))
+    done = {"noise", "thresholds"}
+    for title, dataset in (("maps", maps), ("flags", flags)):
+        if dataset is not None:
+            told += [
+                (f"{title}: {key}", _short(value, 2000))
+                for key, value in dataset.attrs.items()
+                if key not in done and str(value)
+            ]
+    told.append(("versions", ", ".join(f"{name} {version}" for name, version in versions.items())))
+    return "\n".join(f"<dt>{escape(str(term))}</dt><dd>{escape(text)}</dd>" for term, text in told)
