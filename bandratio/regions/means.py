@@ -73,7 +73,8 @@ def region_means(
     Notes
     -----
     A region's mean of a ratio is the ratio of its sums over the pixels that have every band, which noise does not bias.
-    With S_j the region's mean reflectance and g_j = ∂p/∂S_j, random errors add Σ_j g_j² v_j / n, and errors that all
+    With S_j the region's mean reflectance and g_j = ∂p/∂S_j, random errors add Σ_j g_j² v_j / n (a cube's pixel_gain
+    Σ_jk g_j g_k c_jk / n, with c its mean covariance between the bands), and errors that all
     pixels share stay, however large the region. The difference of two regions has the variance
     ``cov[a, a] + cov[b, b] − 2·cov[a, b]``: much of what they share cancels in it.
 
@@ -145,6 +146,9 @@ class _Sums:
         self.random = np.zeros((centres.size, regions))
         self.overlap_names = np.empty((0, 2), dtype=np.int64)
         self.overlap_random = np.zeros((centres.size, 0))
+        # of the gain error that the bands of a pixel share: a covariance between bands, (band, band, region)
+        self.common = np.zeros((centres.size, centres.size, regions))
+        self.overlap_common = np.zeros((centres.size, centres.size, 0))
         self._count = np.zeros((ratios, regions))
         self._mean = np.zeros((ratios, regions))
         self._square = np.zeros((ratios, regions))
@@ -179,7 +183,8 @@ class _Sums:
         sums = cls(band, centres[used], members.names.size, groups, len(ratios))
         sums.overlap_names = overlaps.names
         sums.overlap_random = np.zeros((sums.centres.size, len(overlaps.names)))
-        for start, R, random_map in _stripes(cube, band):
+        sums.overlap_common = np.zeros((sums.centres.size, sums.centres.size, len(overlaps.names)))
+        for start, R, random_map, gain in _stripes(cube, band):
             here = slice(*np.searchsorted(members.pixel, [start, start + R.shape[1]]))
             pixel, region = members.pixel[here] - start, members.region[here]
             # a row of float64 for each band of the region's pixels, and of those only what has every band
@@ -192,6 +197,8 @@ class _Sums:
             if band is None:
                 continue
             sums.random += sums._random_variance(chosen, pixel, random_map, region, sums.random.shape[1])
+            if gain is not None:
+                sums.common += _common_covariance(chosen, gain[pixel], region, sums.random.shape[1])
             both = slice(*np.searchsorted(overlaps.pixel, [start, start + R.shape[1]]))
             if both.stop > both.start:
                 twice, pair = overlaps.pixel[both] - start, overlaps.region[both]
@@ -200,6 +207,10 @@ class _Sums:
                 sums.overlap_random += sums._random_variance(
                     of_both[:, good], twice[good], random_map, pair[good], len(overlaps.names)
                 )
+                if gain is not None:
+                    sums.overlap_common += _common_covariance(
+                        of_both[:, good], gain[twice[good]], pair[good], len(overlaps.names)
+                    )
         return sums
 
     def _add(self, R: NDArray, region: NDArray, group: NDArray) -> None:
@@ -249,6 +260,16 @@ class _Sums:
         return np.sqrt(np.where(count > 1, self._square[place] / np.maximum(count - 1, 1), np.nan))
 
 
+def _common_covariance(R: NDArray, gain: NDArray, region: NDArray, regions: int) -> NDArray[np.float64]:
+    """Sum over the pixels of each region of the bands' covariance by a gain error that they share."""
+    bands = R.shape[0]
+    total = np.empty((bands, bands, regions))
+    for j in range(bands):
+        for k in range(j + 1):
+            total[j, k] = total[k, j] = np.bincount(region, gain.astype(float) ** 2 * R[j] * R[k], regions)
+    return total
+
+
 def _groups(noise: Noise | None, cube: xr.DataArray) -> tuple[NDArray[np.int64] | None, int]:
     """Group of shared errors of each pixel, flat, and how many groups there are."""
     if noise is None or noise.shared_within is None:
@@ -265,14 +286,19 @@ def _groups(noise: Noise | None, cube: xr.DataArray) -> tuple[NDArray[np.int64] 
     return group.reshape(-1).astype(np.int64), names.size
 
 
-def _stripes(cube: xr.DataArray, band: BandNoise | None) -> Iterator[tuple[int, NDArray, NDArray | None]]:
-    """First pixel, reflectances (band, pixel) and map of random noise of one stripe after another."""
+def _stripes(
+    cube: xr.DataArray, band: BandNoise | None
+) -> Iterator[tuple[int, NDArray, NDArray | None, NDArray | None]]:
+    """First pixel, reflectances (band, pixel), maps of random noise and of gain errors of one stripe after another."""
     first = cube.dims[1] if cube.ndim > 1 else None
     random = None if band is None or band.random.dims == ("wavelength",) else band.random
     if random is not None:
         random = random if "wavelength" in random.dims else random.expand_dims("wavelength")
         missing = {dim: cube.sizes[dim] for dim in cube.dims[1:] if dim not in random.dims}
         random = random.expand_dims(missing).transpose(*cube.dims)
+    gain = None if band is None or not isinstance(band.pixel_gain, xr.DataArray) else band.pixel_gain
+    if gain is not None:
+        gain = gain.transpose(*cube.dims[1:])
     if first is None or not is_lazy(cube):
         stops = [cube.sizes[first] if first is not None else 1]
     else:
@@ -284,7 +310,9 @@ def _stripes(cube: xr.DataArray, band: BandNoise | None) -> Iterator[tuple[int, 
         part = cube if first is None else cube.isel({first: slice(start, stop)})
         of_map = random if random is None or first is None else random.isel({first: slice(start, stop)})
         per_pixel = None if of_map is None else np.asarray(of_map.values).reshape(of_map.shape[0], -1)
-        yield start * row, np.asarray(part.values).reshape(cube.shape[0], -1), per_pixel
+        of_gain = gain if gain is None or first is None else gain.isel({first: slice(start, stop)})
+        flat = None if of_gain is None else np.asarray(of_gain.values).reshape(-1)
+        yield start * row, np.asarray(part.values).reshape(cube.shape[0], -1), per_pixel, flat
         start = stop
 
 
@@ -301,7 +329,8 @@ def _propagate(
         return {"value": value}
     g = ratio.gradient(mean, tolerance=tolerance).values  # (band, region)
     with np.errstate(invalid="ignore", divide="ignore"):
-        random = (g**2 * sums.random).sum(axis=0) / n**2 * np.minimum(correlation_area, n)
+        random = (g**2 * sums.random).sum(axis=0) + np.einsum("jr,kr,jkr->r", g, g, sums.common)
+        random = random / n**2 * np.minimum(correlation_area, n)
     # one column for each independent shared error: each band's gain and offset, and the common gain, in each group
     columns = [g[:, :, None] * sums.band.band_gain.values[:, None, None] * part]
     columns.append(g[:, :, None] * sums.band.band_offset.values[:, None, None] * share)
@@ -319,7 +348,9 @@ def _propagate(
         matrix = errors @ errors.T + np.diag(random)
         for pair, (a, b) in enumerate(sums.overlap_names.tolist()):
             area = min(correlation_area, n[a], n[b])
-            common = (g[:, a] * g[:, b] * sums.overlap_random[:, pair]).sum() / (n[a] * n[b]) * area
+            common = (g[:, a] * g[:, b] * sums.overlap_random[:, pair]).sum()
+            common += g[:, a] @ sums.overlap_common[:, :, pair] @ g[:, b]
+            common *= area / (n[a] * n[b])
             matrix[a, b] += common
             matrix[b, a] += common
         found["covariance"] = matrix

@@ -116,3 +116,29 @@ def test_pure_ratios_do_not_move_under_any_law_that_is_alike_in_all_bands():
         after = br.parameters(flat, names=["red_slope", "uv_vis_slope", "mafic_depth"])
         for name in before:
             np.testing.assert_allclose(after[name], before[name].where(flat.geometry_flag == 0), rtol=1e-6)
+
+
+def test_means_over_regions_average_it_away():
+    cube = _cube(shape=(20, 30))
+    labels = np.ones((20, 30), int)
+    labels[:, 20:] = 2
+    ratios = [LEVEL, PURE, OFFSET]
+    eager, lazy = (br.region_means(c, br.Noise(), labels, ratios) for c in (cube, cube.chunk(y=7)))
+    # the same by drawing the pixels' gains: 4000 trials know a standard deviation to 1.1 %
+    rng = np.random.default_rng(17)
+    for place, name in enumerate((1, 2)):
+        inside = labels == name
+        R, gain = cube.values[:, inside], cube.pixel_gain.values[inside]
+        drawn = 1 + rng.normal(size=(4000, gain.size)) * gain
+        means = br.as_cube(R @ drawn.T / gain.size, BANDS)
+        for ratio in ratios:
+            seen = float(ratio.value(means).std())
+            assert float(eager[f"{ratio.name}_sigma"][place]) == pytest.approx(seen, rel=0.05)
+    for ratio in ratios:
+        np.testing.assert_allclose(eager[f"{ratio.name}_sigma_shared"], 0, atol=1e-15)
+        np.testing.assert_allclose(lazy[f"{ratio.name}_sigma"], eager[f"{ratio.name}_sigma"], rtol=1e-9)
+    # pixels alike in colour: the pure ratio of the sums is free of it
+    grey = cube.copy(
+        data=np.broadcast_to(cube.values[:1] * np.array([1, 1.2, 1.4, 1.5])[:, None, None], cube.shape)
+    )
+    np.testing.assert_allclose(br.region_means(grey, br.Noise(), labels, [PURE]).pure_sigma, 0, atol=1e-8)
