@@ -9,7 +9,7 @@ import xarray as xr
 from numpy.typing import ArrayLike, NDArray
 
 from .._checks import non_negative, one_of, open_fraction, positive
-from ..detection.hull import BIN_DEG, STEEPEST_DEG
+from ..detection.hull import STEEPEST_DEG
 from ..detection.outside import Points
 from ..mixing import ICE_DENSITY, mass_weights, reflectance_from_albedo
 from .flags import INFRARED_NM, RED_NM, laser_wavelength
@@ -19,7 +19,7 @@ from .scene import Scene
 __all__ = ["ice_fraction"]
 
 _NODES = 513
-_STEP_DEG = BIN_DEG / 2
+_STEP_DEG = 0.25
 _NAMES = {
     "fraction": "best fraction of ice",
     "fraction_lower": "lower end of the fraction's interval",
