@@ -179,3 +179,11 @@ def test_a_dark_red_pixel_is_out_of_range_not_a_number():
 def test_bad_input(call, error, message):
     with pytest.raises(error, match=message):
         call()
+
+
+def test_a_gain_error_that_all_bands_of_a_pixel_share_is_in_sigma():
+    """What normalisation leaves behind: it moves R750 alone, the ratio keeps."""
+    step, gain = 1e-6, 0.05
+    up, down = (br.iron_oxide(soil() * (1 + sign * step)).feo.item() for sign in (1, -1))
+    found = br.iron_oxide(soil().assign_coords(pixel_gain=gain), br.Noise(random=1e-9))
+    assert found.feo_sigma.item() == pytest.approx(abs(up - down) / (2 * step) * gain, rel=1e-4)

@@ -21,23 +21,48 @@ class Specimens:
 
     Parameters
     ----------
-    values, sigmas : ndarray, shape (sample,)
-        The parameter and its standard uncertainty.
+    values : ndarray, shape (sample,)
+        The parameter.
+    errors : ndarray, shape (3, sample)
+        Variance and covariance of the ratio's scaled numerator N and its denominator D, over D²: var N, cov(N, D) and
+        var D. Whether p = N/D exceeds a limit t is whether N − t·D > 0, and that is exactly Gaussian, with the
+        variance var N − 2t·cov(N, D) + t²·var D; the ratio itself is not.
     specimen : ndarray of int, shape (sample,)
         Which specimen each sample belongs to, 0 … n − 1.
     """
 
     values: NDArray[np.float64]
-    sigmas: NDArray[np.float64]
+    errors: NDArray[np.float64]
     specimen: NDArray[np.intp]
 
     @classmethod
-    def build(cls, values: ArrayLike, sigmas: ArrayLike, names: ArrayLike) -> Specimens:
+    def build(cls, values: ArrayLike, errors: ArrayLike, names: ArrayLike) -> Specimens:
         """From samples with the names of their specimens; samples without a value are left out."""
-        values, sigmas = np.asarray(values, dtype=float), np.asarray(sigmas, dtype=float)
-        known = np.isfinite(values) & np.isfinite(sigmas)
+        values, errors = np.asarray(values, dtype=float), np.asarray(errors, dtype=float)
+        known = np.isfinite(values) & np.isfinite(errors).all(axis=0)
         _, specimen = np.unique(np.asarray(names, dtype=str)[known], return_inverse=True)
-        return cls(values[known], sigmas[known], specimen)
+        return cls(values[known], errors[:, known], specimen)
+
+    @property
+    def turned(self) -> Specimens:
+        """The same with the opposite sign: above becomes below."""
+        return Specimens(-self.values, self.errors * np.array([[1], [-1], [1]]), self.specimen)
+
+    @property
+    def sigmas(self) -> NDArray[np.float64]:
+        """Standard uncertainty of each value, by the law of propagation."""
+        return self.sigmas_at(self.values)
+
+    def sigmas_at(self, limits: NDArray) -> NDArray[np.float64]:
+        """Standard uncertainty of each sample's distance from limits that broadcast against (…, sample)."""
+        of_upper, of_both, of_lower = self.errors
+        variance: NDArray[np.float64] = of_upper - 2 * limits * of_both + limits**2 * of_lower
+        return np.sqrt(np.maximum(variance, 0))
+
+    def beyond(self, limits: NDArray) -> NDArray[np.float64]:
+        """Probability to measure each sample above each limit, shape (sample, limit)."""
+        at = np.asarray(limits, dtype=float)[:, None]
+        return beyond(self.values - at, self.sigmas_at(at)).T
 
     @property
     def count(self) -> int:
@@ -52,19 +77,16 @@ class Specimens:
         return matrix
 
 
-def beyond(values: NDArray, sigmas: NDArray, limits: NDArray) -> NDArray[np.float64]:
-    """Probability that a measurement lies above each limit; without noise 1 above it, else 0.
+def beyond(distance: NDArray, sigmas: NDArray) -> NDArray[np.float64]:
+    """Probability that a measurement lies above a limit; without noise 1 above it, else 0.
 
     Parameters
     ----------
-    values, sigmas : ndarray, broadcast against `limits`
-        Values and standard uncertainties.
-    limits : ndarray
-        In the same unit.
+    distance, sigmas : ndarray, shapes that broadcast
+        True value minus limit, and its standard uncertainty.
     """
     from scipy.special import ndtr
 
-    distance = values - limits
     with np.errstate(divide="ignore", invalid="ignore"):
         smooth = ndtr(distance / sigmas)
     share: NDArray[np.float64] = np.where(sigmas > 0, smooth, (distance > 0).astype(float))
@@ -82,7 +104,7 @@ def pairwise_order(wanted: Specimens, unwanted: Specimens) -> NDArray[np.float64
     """
     difference = wanted.values[:, None] - unwanted.values[None, :]
     sigma = np.hypot(wanted.sigmas[:, None], unwanted.sigmas[None, :])
-    order = beyond(difference, sigma, np.zeros(1))
+    order = beyond(difference, sigma)
     order = np.where((sigma == 0) & (difference == 0), 0.5, order)
     of_specimens: NDArray[np.float64] = wanted.mean_matrix @ order @ unwanted.mean_matrix.T
     return of_specimens

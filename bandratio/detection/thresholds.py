@@ -15,12 +15,12 @@ from ..catalogue import resolve, shoulder_of
 from ..cube import require_cube
 from ..noise import Noise
 from ..ratio import BandRatio
-from ..spectra import chosen_samples
+from .labelled import labelled_groups, parameters_of
 from .separation import Separation
-from .specimens import Specimens, area_interval, beyond, bootstrap_weights, pairwise_order
+from .specimens import Specimens, area_interval, bootstrap_weights, pairwise_order
 from .threshold import Threshold
 
-__all__ = ["labelled_groups", "thresholds"]
+__all__ = ["thresholds"]
 
 _RESAMPLES = 2000
 _SEED = 20250117
@@ -79,7 +79,8 @@ def thresholds(
     beyond both is bounded for any correlation of their errors: at most the smaller of the two for the unwanted, at
     least p1 + p2 − 1 for the wanted.
 
-    Sigma is linear in the errors and a ratio is not: at 3 % noise a rate of 1 % is met to about a sixth of itself.
+    A ratio of noisy numbers is not Gaussian, but whether it exceeds a threshold t is the sign of a linear combination of
+    the bands, numerator minus t times denominator, which is: the rates are exact for Gaussian noise.
 
     The direction (wanted above, or below) is the one in which the area exceeds one half.
 
@@ -107,9 +108,7 @@ def thresholds(
             "each"
         )
     first, second = labelled_groups(spectra, wanted, unwanted)
-    groups = [
-        _parameters_of(ratios, cube.isel(sample=chosen), noise, tolerance) for chosen in (first, second)
-    ]
+    groups = [parameters_of(ratios, cube.isel(sample=chosen), noise, tolerance) for chosen in (first, second)]
     cuts = [_oriented(name, groups[0][name], groups[1][name]) for name in ratios]
     found, separation = _one(cuts[0], rate) if len(cuts) == 1 else _pair(cuts, rate)
     quantity = str(spectra.coords["quantity"].item()) if "quantity" in spectra.coords else None
@@ -135,61 +134,6 @@ def _as_list(
     return dict(names) if isinstance(names, Mapping) else list(names)
 
 
-def labelled_groups(
-    spectra: xr.DataArray, wanted: str | Iterable[str], unwanted: str | Iterable[str]
-) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
-    """Indices of the wanted and of the unwanted samples.
-
-    Raises
-    ------
-    ValueError
-        If a name is unknown, a group has fewer than two specimens, or a specimen is in both.
-    """
-    masks = [chosen_samples(spectra, group) for group in (wanted, unwanted)]
-    names = specimen_names(spectra)
-    shared = np.intersect1d(names[masks[0]], names[masks[1]])
-    if shared.size:
-        raise ValueError(
-            f"wanted and unwanted share {listed(shared.tolist()[:5])}; a specimen belongs to one of them"
-        )
-    for title, mask in zip(("wanted", "unwanted"), masks, strict=True):
-        count = np.unique(names[mask]).size
-        if count < 2:
-            raise ValueError(
-                f"the {title} group holds {int(mask.sum())} samples of {count} specimen; two specimens or more are "
-                "needed, since grain sizes of one rock say nothing of how rocks differ"
-            )
-    return np.flatnonzero(masks[0]), np.flatnonzero(masks[1])
-
-
-def specimen_names(spectra: xr.DataArray) -> NDArray:
-    """Name of each sample's specimen; without that coordinate every sample is its own."""
-    key = "specimen" if "specimen" in spectra.coords else "sample"
-    names = spectra[key].values if key in spectra.coords else np.arange(spectra.sizes["sample"])
-    return np.array([str(name) for name in names])
-
-
-def _parameters_of(
-    ratios: Mapping[str, BandRatio], cube: xr.DataArray, noise: Noise | None, tolerance: float
-) -> dict[str, Specimens]:
-    names = specimen_names(cube)
-    found = {}
-    for name, ratio in ratios.items():
-        value = ratio.value(cube, tolerance=tolerance).values
-        sigma = (
-            np.where(np.isfinite(value), 0.0, np.nan)
-            if noise is None
-            else ratio.sigma(cube, noise, tolerance=tolerance).values
-        )
-        found[name] = Specimens.build(value, sigma, names)
-        if found[name].count < 2:
-            raise ValueError(
-                f"{name} has a value for {found[name].count} specimen of a group; the others have no channels at its "
-                "bands, or their denominator is not positive"
-            )
-    return found
-
-
 @dataclass(frozen=True, eq=False)
 class _Cut:
     """One parameter of both groups, turned so that the wanted lie above."""
@@ -205,8 +149,7 @@ def _oriented(name: str, wanted: Specimens, unwanted: Specimens) -> _Cut:
     order = pairwise_order(wanted, unwanted)
     if order.mean() >= 0.5:
         return _Cut(name, 1, wanted, unwanted, order)
-    turned = [Specimens(-each.values, each.sigmas, each.specimen) for each in (wanted, unwanted)]
-    return _Cut(name, -1, turned[0], turned[1], 1 - order)
+    return _Cut(name, -1, wanted.turned, unwanted.turned, 1 - order)
 
 
 def _limits(cut: _Cut, points: int) -> NDArray[np.float64]:
@@ -223,7 +166,7 @@ def _limits(cut: _Cut, points: int) -> NDArray[np.float64]:
 
 def _specimen_rates(group: Specimens, limits: NDArray) -> NDArray[np.float64]:
     """Share of each specimen beyond each limit, shape (specimen, limit)."""
-    return group.mean_matrix @ beyond(group.values[:, None], group.sigmas[:, None], limits[None, :])
+    return group.mean_matrix @ group.beyond(limits)
 
 
 def _one(cut: _Cut, rate: float) -> tuple[list[tuple[float, float]], list[Separation]]:
@@ -236,7 +179,7 @@ def _one(cut: _Cut, rate: float) -> tuple[list[tuple[float, float]], list[Separa
     areas = np.einsum("bi,ij,bj->b", weights[0], cut.order, weights[1])
     drawn = limits[np.argmax(weights[1] @ false <= rate, axis=1)]
     detection, alarms = (
-        float((group.mean_matrix @ beyond(group.values, group.sigmas, np.array(value))).mean())
+        float((group.mean_matrix @ group.beyond(np.array([value]))).mean())
         for group in (cut.wanted, cut.unwanted)
     )
     separation = _separation(
@@ -325,10 +268,7 @@ def _beyond_both(
     At least p + q − 1 (for the wanted) and at most min(p, q) (for the unwanted), whatever the correlation of the
     two errors.
     """
-    shares = [
-        beyond(group.values[:, None], group.sigmas[:, None], limit[None, :])
-        for group, limit in zip(groups, limits, strict=True)
-    ]
+    shares = [group.beyond(limit) for group, limit in zip(groups, limits, strict=True)]
     of_specimen = np.zeros((groups[0].count, limits[0].size * limits[1].size))
     for sample, specimen in enumerate(groups[0].specimen):
         both = bound(shares[0][sample][:, None], shares[1][sample][None, :])

@@ -10,8 +10,8 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from .._checks import listed
+from ..detection.labelled import labelled_groups, specimen_names
 from ..detection.specimens import area_interval, bootstrap_weights
-from ..detection.thresholds import labelled_groups, specimen_names
 from ..noise import Noise
 from ..spectra import band_average
 from .separability import Groups, Pairs
