@@ -44,11 +44,12 @@ from .photometry import (
     slope_sigma_from_height,
     terrain_geometry,
 )
-from .planning import compare_filter_sets, rank_bands
+from .planning import compare_filter_sets, least_ice, plan_lasers, rank_bands
 from .plots import (
     plot_composite,
     plot_histogram,
     plot_ice_plane,
+    plot_laser_plan,
     plot_map,
     plot_materials,
     plot_scatter,

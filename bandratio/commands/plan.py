@@ -14,7 +14,7 @@ __all__ = ["command"]
 
 @click.group()
 def command() -> None:
-    """Plan an instrument: which bands, and which sets of filters, tell materials apart."""
+    """Plan an instrument: bands and sets of filters that tell materials apart, lasers that find ice."""
 
 
 def _words(text: str) -> list[str]:
@@ -143,3 +143,111 @@ def _read_sets(path: Path) -> dict[str, tuple[Any, ...]]:
         widths = rows.fwhm.to_list() if "fwhm" in rows else None
         sets[str(name)] = (rows.wavelength.to_list(), widths, Noise(**given) if given else None)
     return sets
+
+
+@command.command(
+    epilog="Example: bandratio plan lasers --ice-free mare --relative 0.03 --sigma 0.002 -o lasers.png"
+)
+@click.option(
+    "-o", "--output", metavar="FILE", help="Picture (.png, .pdf, .svg) of the curves, or their table (.csv)."
+)
+@click.option(
+    "--ice-free",
+    metavar="NAME,NAME,…",
+    help="Ground list: mare, highland, groups or materials; else any rock.",
+)
+@click.option("--site", metavar="NAME", help="Material of the list that the ice lies on; else mature soil.")
+@click.option("--red-nm", default=640.0, show_default=True, help="Red wavelength [nm].")
+@click.option("--infrared-nm", default=1535.0, show_default=True, help="Infrared wavelength [nm].")
+@click.option("--grain", default=50.0, show_default=True, help="Grain size of the ice [µm].")
+@click.option(
+    "--relative",
+    default="0.03",
+    show_default=True,
+    metavar="F[,F]",
+    help="Noise of each shot, a fraction; red, infrared.",
+)
+@click.option(
+    "--sigma",
+    default="0.002",
+    show_default=True,
+    metavar="A[,A]",
+    help="Noise of each shot, in albedo; red, infrared.",
+)
+@click.option(
+    "--gain-sigma", default=0.0, show_default=True, help="Error of the red/infrared gain, a fraction."
+)
+@click.option(
+    "--incidence", type=float, help="Incidence of the shots [degree]; else the laboratory's geometry."
+)
+@click.option(
+    "--false-discovery-rate", default=0.05, show_default=True, help="Share of false candidates, at most."
+)
+@click.option("--prevalence", default=0.05, show_default=True, help="Share of the shots that hold ice.")
+@click.option(
+    "--probability", default=0.9, show_default=True, help="Wanted probability to flag a shot with ice."
+)
+@click.option("--overwrite", is_flag=True, help="Replace FILE where it exists.")
+def lasers(output: str | None, ice_free: str | None, **given: Any) -> None:
+    """The least ice that two lasers find, over noise, infrared wavelength and grain size of the ice.
+
+    Eye safety of any laser follows IEC 60825-1, local rules and a licensed laser safety officer.
+    """
+    from ..files.atomic import require_free
+    from ..planning import plan_lasers
+
+    kinds = (".png", ".pdf", ".svg", ".csv")
+    if output is not None and Path(output).suffix.lower() not in kinds:
+        raise ValueError(f"FILE must end in {', '.join(kinds)}, got {output!r}")
+    if output is not None:
+        require_free(output, overwrite=given["overwrite"])
+    plan = plan_lasers(
+        None if ice_free is None else _words(ice_free),
+        site=given["site"], red_nm=given["red_nm"], infrared_nm=given["infrared_nm"], grain_um=given["grain"], relative=_one_or_two(given["relative"], "--relative"), sigma=_one_or_two(given["sigma"], "--sigma"), gain_sigma=given["gain_sigma"], incidence_deg=given["incidence"], false_discovery_rate=given["false_discovery_rate"], prevalence=given["prevalence"], probability=given["probability"],
+    )  # fmt: skip
+    names = {
+        "noise": "noise [% of the albedo]",
+        "wavelength": "infrared [nm]",
+        "grain_size": "ice grains [µm]",
+    }
+    click.echo("least ice found: areal [% of the area], intimate [% of the weight]; blank where none is")
+    for part, title in names.items():
+        table = 100 * getattr(plan, part)
+        across = [f"{100 * x if part == 'noise' else x:g}" for x in table.index]
+        click.echo(f"\n{title:<26}{'areal':>8}{'intimate':>10}")
+        for x, areal, intimate in zip(across, table["areal"], table["intimate"], strict=True):
+            cells = ("" if value != value else f"{value:.1f}" for value in (areal, intimate))  # noqa: PLR0124 (NaN)
+            click.echo(f"{x:<26}{next(cells):>8}{next(cells):>10}")
+    click.echo("")
+    for line in (plan.sentence, *plan.findings, plan.caution):
+        click.echo(f"- {line}")
+    if output is not None:
+        _write_plan(plan, Path(output), overwrite=given["overwrite"])
+        click.echo(f"written to {output}")
+
+
+def _one_or_two(text: str, option: str) -> Any:
+    values = numbers(text, option) or []
+    if len(values) not in (1, 2):
+        raise ValueError(f"{option} wants one number, or one for red and one for infrared, got {text!r}")
+    return values[0] if len(values) == 1 else values
+
+
+def _write_plan(plan: Any, path: Path, *, overwrite: bool) -> None:
+    import pandas as pd
+
+    from ..files import beside
+
+    with beside(path, overwrite=overwrite) as unfinished:
+        if path.suffix.lower() == ".csv":
+            parts = {
+                "relative noise": plan.noise,
+                "infrared [nm]": plan.wavelength,
+                "ice grains [µm]": plan.grain_size,
+            }
+            table = pd.concat(parts, names=["curve", "value"])
+            table.to_csv(unfinished)
+        else:
+            from ..plots import plot_laser_plan
+
+            plot_laser_plan(plan)[0].figure.savefig(unfinished)
