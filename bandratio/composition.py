@@ -357,7 +357,7 @@ def _covariances(
     along_g, along_h = ((each * R).sum("wavelength", skipna=False) for each in (g, h))
     if second.is_pure:
         along_h = xr.zeros_like(along_h)  # a common gain cancels exactly in a pure ratio
-    c2 = band.common_gain**2 + band.pixel_gain**2 + band.pixel_gain**2
+    c2 = band.common_gain**2 + band.pixel_gain**2
 
     def covariance(a: xr.DataArray, b: xr.DataArray, along: xr.DataArray) -> xr.DataArray:
         return (a * b * var).sum("wavelength", skipna=False) + c2 * along

@@ -89,6 +89,7 @@ def form_errors(
     errors = np.stack([w @ variance for w in (n * n, n * d, d * d)])
     if not ratio.is_pure:  # in a pure ratio a gain of all bands moves N and D alike
         upper, lower = n @ R, d @ R
-        errors += band.common_gain**2 * np.stack([upper**2, upper * lower, lower**2])
+        gains = np.asarray(band.common_gain**2 + band.pixel_gain**2)
+        errors += gains * np.stack([upper**2, upper * lower, lower**2])
     scaled: NDArray[np.float64] = errors / (d @ R + ratio.denominator_offset) ** 2
     return scaled
