@@ -268,7 +268,7 @@ def brightness_factor_of(cube: xr.DataArray) -> xr.DataArray | float:
     """What a cube's reflectances were multiplied by since they were measured [1]; one where nothing says so."""
     if "brightness_factor" not in cube.coords:
         return 1.0
-    factor = cube.coords["brightness_factor"].reset_coords(drop=True)
+    factor: xr.DataArray = cube.coords["brightness_factor"].reset_coords(drop=True)
     return factor.transpose("wavelength", ...) if "wavelength" in factor.dims else factor
 
 

@@ -32,6 +32,7 @@ REASONS = (
 #: How far rounded angles may miss |i − e| ≤ g ≤ i + e [deg] (common practice, no source).
 SLACK_DEG = 0.5
 _MIDDLING_ALBEDO = 0.3
+_FAINTEST = 1e-6
 _MIXED = (Lambert, LommelSeeliger, LunarLambert)
 
 
@@ -77,6 +78,12 @@ class Correction:
         return self.phase_functions is None and all(isinstance(law, _MIXED) for law in laws)
 
     @property
+    def bands_alike(self) -> bool:
+        """True where every band of a pixel is multiplied by the same factor."""
+        functions = self.phase_functions or ()
+        return len(set(self.laws)) <= 1 and len(set(functions)) <= 1 and not isinstance(self.laws[0], Hapke)
+
+    @property
     def has_sigma(self) -> bool:
         """True where the correction itself is uncertain."""
         return self.slope_sigma_deg > 0 or bool(self.spread)
@@ -112,8 +119,9 @@ class Correction:
         phase: NDArray,
         flag: NDArray,
         out: NDArray,
+        brightness: NDArray,
     ) -> None:
-        """Write the normalised values of one block, NaN where the flag is not 0.
+        """Write the normalised values of one block, NaN where the flag is not 0, and what they were multiplied by.
 
         Parameters
         ----------
@@ -124,26 +132,35 @@ class Correction:
         flag : ndarray of int8, shape (…)
             As `flags` gives it; pixels that turn out brighter than the law allows are marked here.
         out : ndarray, shape (band, …)
-            Where to write.
+            Where to write; without bands, only the factors are written.
+        brightness : ndarray, shape (0, 1 or band, …)
+            Where to write R at the standard geometry over R here [1]: not at all, of the first band, or of each.
         """
         with np.errstate(all="ignore"):
             mu0, mu = cosine(incidence), cosine(emission)
             previous: Law | None = None
             factor: NDArray = mu0
             for band, law in enumerate(self.laws):
+                if band >= max(len(out), len(brightness)):
+                    break
                 if isinstance(law, Hapke):
-                    out[band] = self._hapke(law, values[band], mu0, mu, phase, flag)
+                    ratio = self._hapke_ratio(law, values[band], mu0, mu, phase, flag)
+                    np.multiply(values[band], ratio, out=out[band])
+                    if band < len(brightness):
+                        brightness[band] = ratio
                     continue
                 if law is not previous:
                     factor = self._factor(law, mu0, mu, phase)
                     np.copyto(factor, np.nan, where=flag != 0)
                     previous = law
-                if self.phase_functions is None:
-                    np.multiply(values[band], factor, out=out[band])
-                else:
+                whole = factor
+                if self.phase_functions is not None:
                     function = self.phase_functions[band]
-                    at_target = function.value(np.array(self.target.phase))
-                    np.multiply(values[band], factor * (at_target / function.value(phase)), out=out[band])
+                    whole = factor * (function.value(np.array(self.target.phase)) / function.value(phase))
+                if band < len(out):
+                    np.multiply(values[band], whole, out=out[band])
+                if band < len(brightness):
+                    brightness[band] = whole
 
     def sigma(
         self,
@@ -222,20 +239,23 @@ class Correction:
         b = (log(x0, x + step) - log(x0, x - step)) / (2 * step)
         return a.astype(mu0.dtype), b.astype(mu0.dtype)
 
-    def _hapke(
+    def _hapke_ratio(
         self, law: Hapke, values: NDArray, mu0: NDArray, mu: NDArray, phase: NDArray, flag: NDArray
     ) -> NDArray:
+        """R at the standard geometry over R here, which for this law depends on R itself."""
         used = flag == 0
-        result = np.full(values.shape, np.nan, dtype=values.dtype)
         # the quantity as a reflectance factor, and back at the standard geometry
-        here = values[used] / self.per_reff
-        there = self.per_reff
+        here = values[used].astype(float) / self.per_reff
+        # a reflectance of zero stays zero, and is multiplied as the faintest are
+        here = np.where(here == 0, _FAINTEST, here)
+        geometry = 1.0
         if not self.per_mu0:
             here = here / mu0[used]
-            there = self.per_reff * self.target.mu0
-        seen = law.seen_from(here, mu0[used], mu[used], phase[used], self.target) * there
-        result[used] = seen
+            geometry = self.target.mu0 / mu0[used]
+        seen = law.seen_from(here, mu0[used], mu[used], phase[used], self.target)
+        ratio = np.full(values.shape, np.nan, dtype=values.dtype)
+        ratio[used] = seen / here * geometry
         beyond = np.zeros(values.shape, dtype=bool)
         beyond[used] = np.isfinite(here) & ~np.isfinite(seen)
         flag[beyond] = 7
-        return result
+        return ratio

@@ -22,9 +22,9 @@ _OPTIONS: dict[str, Any] = {"cache": True, "nogil": True, "error_model": "numpy"
 @njit(**_OPTIONS)
 def mixed_law_loop(  # type: ignore[no-untyped-def]
     values, incidence, emission, phase, shadow, L, at_target, spread, spread_at_target, slope_sigma, numbers,
-    out, gain, flag, offset,
+    out, gain, brightness, flag, offset,
 ):  # fmt: skip
-    """Normalised values, relative sigma of the correction and flags.
+    """Normalised values, relative sigma of the correction, flags, and what the values were multiplied by.
 
     Parameters
     ----------
@@ -42,8 +42,10 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
         1/μ0 of the standard geometry where the quantity is divided by μ0, else 0; largest incidence and emission, and
         slack of the angles [deg]; 1 where the sigma is wanted, else 0.
     values, out, gain, flag : ndarray, shape (band, all pixels), the same, (all pixels,) and (all pixels,)
-        Reflectances, and where to write them normalised, sigma and flags, from pixel `offset` on; no bands: only sigma
-        and flags are wanted.
+        Reflectances, and where to write them normalised, sigma and flags, from pixel `offset` on; no bands: the values
+        are not wanted.
+    brightness : ndarray, shape (0, 1 or band, all pixels)
+        Where to write the factors: not at all, of the first band, or of each.
     """
     kind = out.dtype.type
     zero, one = kind(0), kind(1)
@@ -86,13 +88,19 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
         for p in range(m):
             if not (np.isfinite(i[p]) & np.isfinite(e[p]) & np.isfinite(g[p])):
                 marks[p] = 1
-        for band in range(values.shape[0]):
+        for band in range(max(values.shape[0], brightness.shape[0])):
             if band == 0 or not (L[band] == L[band - 1]).all():
                 _factor(L[band], at_target[band], g, mu0, mu, factor)
                 for p in range(m):
                     # per_mu0 is 0 for radiance factors, whose factor stays as it is
                     by = one if per_mu0 == zero else mu0[p] * per_mu0
                     factor[p] = factor[p] * by if marks[p] == 0 else kind(np.nan)
+            if band < brightness.shape[0]:
+                multiplied = brightness[band, offset + start : offset + stop]
+                for p in range(m):
+                    multiplied[p] = factor[p]
+            if band >= values.shape[0]:
+                continue
             row, written = (
                 values[band, offset + start : offset + stop],
                 out[band, offset + start : offset + stop],

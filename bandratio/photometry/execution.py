@@ -25,8 +25,8 @@ _THREAD_PIXELS = 65_536
 
 def at_once(
     cube: xr.DataArray, planes: Mapping[str, xr.DataArray], correction: Correction
-) -> tuple[NDArray, NDArray, NDArray]:
-    """Normalised values, flags and relative sigma of a cube in memory, on every core.
+) -> tuple[NDArray, NDArray, NDArray, NDArray]:
+    """Normalised values, flags, relative sigma and brightness factor of a cube in memory, on every core.
 
     Parameters
     ----------
@@ -45,7 +45,7 @@ def at_once(
 
 def lazily(
     cube: xr.DataArray, planes: Mapping[str, xr.DataArray], correction: Correction
-) -> tuple[Any, Any, Any]:
+) -> tuple[Any, Any, Any, Any]:
     """The same as dask arrays; the geometry may be lazy too."""
     import dask.array as da
 
@@ -72,22 +72,28 @@ def lazily(
     index = "z" + pixel
     values = da.blockwise(_part, index, data, index, *pairs, part="values", dtype=data.dtype, **common)
     gain = lazy_plane("gain", np.float32) if correction.has_sigma else None
-    return values, lazy_plane("flag", np.int8), gain
+    if correction.bands_alike:
+        factor = lazy_plane("factor", np.float32)
+    else:
+        factor = da.blockwise(_part, index, data, index, *pairs, part="factor", dtype=np.float32, **common)
+    return values, lazy_plane("flag", np.int8), gain, factor
 
 
 def _part(
     values: NDArray, *planes: NDArray, correction: Correction, names: tuple[str, ...], part: str
 ) -> NDArray:
-    out, flag, _ = _run(values, dict(zip(names, planes, strict=True)), correction, sigma=False)
-    return flag if part == "flag" else out
+    named = dict(zip(names, planes, strict=True))
+    out, flag, _, factor = _run(values, named, correction, sigma=False, brightness=part == "factor")
+    return {"flag": flag, "values": out, "factor": factor}[part]
 
 
 def _part_of_geometry(
     *planes: NDArray, correction: Correction, names: tuple[str, ...], part: str, kind: Any
 ) -> NDArray:
     none = np.empty((0, *planes[0].shape), dtype=kind)
-    _, flag, gain = _run(none, dict(zip(names, planes, strict=True)), correction, sigma=part == "gain")
-    return flag if part == "flag" else gain
+    named = dict(zip(names, planes, strict=True))
+    _, flag, gain, factor = _run(none, named, correction, sigma=part == "gain", brightness=part == "factor")
+    return {"flag": flag, "gain": gain, "factor": factor}[part]
 
 
 def _run(
@@ -97,8 +103,9 @@ def _run(
     threads: int = 1,
     *,
     sigma: bool = True,
-) -> tuple[NDArray, NDArray, NDArray]:
-    """Arrays of a cube or of one block of it; no bands in `values`: flags and sigma only."""
+    brightness: bool = True,
+) -> tuple[NDArray, NDArray, NDArray, NDArray]:
+    """Arrays of a cube or of one block of it; no bands in `values`: what the geometry alone tells."""
     shape = values.shape[1:]
     bands, pixels = values.shape[0], math.prod(shape)
     flat = np.ascontiguousarray(values).reshape(bands, pixels)
@@ -107,6 +114,8 @@ def _run(
     flag = np.empty(pixels, dtype=np.int8)
     sigma = sigma and correction.has_sigma
     gain = np.empty(pixels if sigma else 0, dtype=np.float32)
+    alike = correction.bands_alike
+    factor = np.empty((brightness * (1 if alike else bands), pixels), dtype=np.float32)
     do = _compiled if correction.mixed_only else _plane_by_plane
     threads = max(1, min(threads, pixels // _THREAD_PIXELS))
     stretch = _BLOCK_PIXELS if do is _plane_by_plane else -(-pixels // (1 if threads == 1 else 8 * threads))
@@ -114,7 +123,7 @@ def _run(
 
     def one(stretch: slice) -> None:
         cut = {name: np.ascontiguousarray(plane[stretch]) for name, plane in whole.items()}
-        do(correction, flat, cut, out, flag, gain, stretch)
+        do(correction, flat, cut, out, flag, gain, factor, stretch)
 
     if threads == 1:
         for each in stretches:
@@ -122,7 +131,8 @@ def _run(
     else:
         with ThreadPoolExecutor(threads) as pool:
             list(pool.map(one, stretches))
-    return out.reshape(values.shape), flag.reshape(shape), gain.reshape(shape if sigma else (0,))
+    factor = factor.reshape(shape if alike and brightness else (factor.shape[0], *shape))
+    return out.reshape(values.shape), flag.reshape(shape), gain.reshape(shape if sigma else (0,)), factor
 
 
 def _plane_by_plane(
@@ -132,6 +142,7 @@ def _plane_by_plane(
     out: NDArray,
     flag: NDArray,
     gain: NDArray,
+    factor: NDArray,
     stretch: slice,
 ) -> None:
     angles = (planes["incidence"], planes["emission"], planes["phase"])
@@ -139,8 +150,7 @@ def _plane_by_plane(
     if gain.size:
         # before the values are looked at, so that the sigma depends on the geometry alone
         gain[stretch] = correction.sigma(*angles, marked, planes.get("slope_sigma"))
-    if values.shape[0]:
-        correction.apply(values[:, stretch], *angles, marked, out[:, stretch])
+    correction.apply(values[:, stretch], *angles, marked, out[:, stretch], factor[:, stretch])
     flag[stretch] = marked
 
 
@@ -151,6 +161,7 @@ def _compiled(
     out: NDArray,
     flag: NDArray,
     gain: NDArray,
+    factor: NDArray,
     stretch: slice,
 ) -> None:
     from .disk_loop import mixed_law_loop
@@ -177,6 +188,7 @@ def _compiled(
         np.array(numbers, dtype=float),
         out,
         gain,
+        factor,
         flag,
         stretch.start,
     )

@@ -19,7 +19,7 @@ from .execution import at_once, lazily
 from .hapke import Hapke
 from .laws import LAWS, Law, law_of
 from .phase import PhaseFunction
-from .quantities import per_bidirectional, require_quantity
+from .quantities import multiplied, per_bidirectional, require_quantity
 
 __all__ = ["SPREAD", "masked_pixels", "normalise"]
 
@@ -82,7 +82,9 @@ def normalise(
     DataArray
         The cube at the standard geometry, lazy where `cube` is, NaN where masked. Coordinates: `pixel_gain` [1], the
         relative standard uncertainty of the correction, common to all bands of a pixel and new in each pixel, which
-        ``parameters`` takes into the sigmas (it cancels in pure ratios); `geometry_flag`, why a pixel is masked;
+        ``parameters`` takes into the sigmas (it cancels in pure ratios); `brightness_factor` [1], what each reflectance was
+        multiplied by, along `wavelength` too only where the bands differ: the errors that ``Noise`` states for the cube as
+        it came count by it at the standard geometry; `geometry_flag`, why a pixel is masked;
         `incidence`, `emission`, `phase` of the standard geometry [deg]. Attribute `normalisation` (JSON) says what was
         done.
 
@@ -94,6 +96,10 @@ def normalise(
 
     Notes
     -----
+    Hapke's law is not linear: its `brightness_factor` is the local R(i0, e0, g0)/R of each value, and how R(i0, e0, g0)
+    grows with R is a little more than that where the standard geometry shows more multiple scattering, and less where it
+    shows less.
+
     Where the law has another parameter in each band, a slope error does not cancel wholly in ratios; the part common to
     the bands (their mean) is what `pixel_gain` holds. Between k = 0.60 and 0.65, what is left of a slope error of 1° at 45° incidence
     is 0.1 % of the ratio.
@@ -157,9 +163,18 @@ def normalise(
     if per_pixel is not None:
         planes["slope_sigma"] = per_pixel
     lazy = is_lazy(cube) or any(is_lazy(plane) for plane in planes.values())
-    values, flag, gain = (lazily if lazy else at_once)(cube, planes, correction)
+    values, flag, gain, factor = (lazily if lazy else at_once)(cube, planes, correction)
     return _labelled(
-        cube, values, flag, gain, correction, chosen, phase_function, slope_sigma=sigma_plane, spread=spread
+        cube,
+        values,
+        flag,
+        gain,
+        factor,
+        correction,
+        chosen,
+        phase_function,
+        slope_sigma=sigma_plane,
+        spread=spread,
     )
 
 
@@ -300,6 +315,7 @@ def _labelled(
     values: Any,
     flag: Any,
     gain: Any,
+    factor: Any,
     correction: Correction,
     law: Law,
     phase_function: PhaseFunction | None,
@@ -333,6 +349,8 @@ def _labelled(
     }
     for name, angle in zip(("incidence", "emission", "phase"), told["to"], strict=True):
         coords[name] = ((), angle, {"units": "degree", "long_name": f"{name} angle of the standard geometry"})
+    bands = () if correction.bands_alike else ("wavelength",)
+    coords["brightness_factor"] = multiplied(cube, xr.DataArray(factor, dims=(*bands, *dims)))
     if correction.has_sigma:
         coords["pixel_gain"] = (
             dims,

@@ -10,6 +10,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from .._checks import listed, one_of
 from ..cube import QUANTITIES, quantity_of, require_cube
+from ..noise import brightness_factor_of
 from .angles import LEAST_COSINE, angle_plane, cosine, refuse_radians
 
 __all__ = ["convert_quantity", "per_bidirectional", "require_quantity"]
@@ -18,6 +19,7 @@ __all__ = ["convert_quantity", "per_bidirectional", "require_quantity"]
 _DIVIDED_BY_MU0 = ("brdf", "reflectance_factor")
 #: Quantities relative to a perfect Lambert surface, hence multiplied by π.
 _TIMES_PI = ("radiance_factor", "reflectance_factor")
+_BRIGHTNESS = {"units": "1", "long_name": "what the reflectances were multiplied by since they were measured"}
 
 
 def per_bidirectional(quantity: str, mu0: ArrayLike) -> NDArray:
@@ -119,7 +121,9 @@ def convert_quantity(
     Returns
     -------
     DataArray
-        The same cube in the other quantity; lazy where `cube` is. NaN where μ0 is below 0.01.
+        The same cube in the other quantity; lazy where `cube` is. NaN where μ0 is below 0.01. The coordinate
+        `brightness_factor` [1] holds what its reflectances were multiplied by, this conversion included, since the cube
+        came: ``Noise`` is stated for the cube as it came, and its errors count by it in the new quantity.
 
     Raises
     ------
@@ -165,7 +169,19 @@ def convert_quantity(
     converted.attrs = dict(cube.attrs)
     if "units" in converted.attrs:
         converted.attrs["units"] = QUANTITIES[to][0]
-    return converted.assign_coords(quantity=to).rename(cube.name)
+    factor = factor if isinstance(factor, xr.DataArray) else xr.DataArray(factor)
+    return converted.assign_coords(quantity=to, brightness_factor=multiplied(cube, factor)).rename(cube.name)
+
+
+def multiplied(cube: xr.DataArray, factor: xr.DataArray) -> xr.Variable:
+    """The coordinate `brightness_factor` of a cube whose reflectances are multiplied once more."""
+    before = brightness_factor_of(cube)
+    if isinstance(before, xr.DataArray):
+        # both lie on the cube's pixels, so there is nothing to align by coordinates
+        before = before.drop_vars(list(before.coords))
+    product = (before * factor.drop_vars(list(factor.coords))).astype(np.float32)
+    order = [dim for dim in cube.dims if dim in product.dims]
+    return product.transpose(*order).assign_attrs(_BRIGHTNESS).variable
 
 
 def _cosine_of_incidence(

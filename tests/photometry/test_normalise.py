@@ -188,11 +188,13 @@ def test_compiled_loop_agrees_with_the_readable_formulas():
                     (law.for_bands(BANDS)[0], br.Lambert(), br.LommelSeeliger()), 0.1, 0.2,
                 )  # fmt: skip
                 compiled = _run(values, planes, correction)
-                plain = np.empty_like(values), np.empty(n, np.int8), np.empty(n, np.float32)
+                factors = np.empty((1 if correction.bands_alike else 4, n), np.float32)
+                plain = np.empty_like(values), np.empty(n, np.int8), np.empty(n, np.float32), factors
                 _plane_by_plane(correction, values, planes, *plain, slice(0, n))
                 np.testing.assert_allclose(compiled[0], plain[0], rtol=1e-12)
                 np.testing.assert_array_equal(compiled[1], plain[1])
                 np.testing.assert_allclose(compiled[2], plain[2], rtol=1e-5)
+                np.testing.assert_allclose(np.atleast_2d(compiled[3]), factors, rtol=1e-6)
 
 
 def test_masks_say_why_and_nothing_is_divided_by_almost_zero():
