@@ -99,7 +99,7 @@ def least_ice(
     Examples
     --------
     >>> round(least_ice("areal", ice_free=["Soil 62231", "Ilmenite HS231.3B"], grain_um=200), 2)
-    0.07
+    0.03
     """
     one_of("kind", kind, ("areal", "intimate"))
     lasers = (positive("red_nm", red_nm, "nm"), positive("infrared_nm", infrared_nm, "nm"))
