@@ -28,6 +28,7 @@ class Channels:
 
     title: str
     wavelengths: NDArray[np.float64]
+    library: str = ""
 
 
 def first_line(path: Path) -> str:
@@ -72,7 +73,7 @@ def find_channels(files: Iterable[Path]) -> list[Channels]:
             match = _RECORD.match(header)
             assert match is not None
             unit = 1.0 if re.search(r"\bnm\b|nanomet", match["title"]) else 1000.0
-            found.append(Channels(match["title"], values * unit))
+            found.append(Channels(match["title"], values * unit, match["library"]))
     return found
 
 
@@ -119,9 +120,15 @@ def read_usgs(path: Path, channels: list[Channels]) -> Spectrum | None:
             f"{path}: no wavelength file for the {values.size} channels of {spectrometer}; found {have}; put the "
             "library's wavelength file beside it"
         )
+    same_library = [each for each in fitting if each.library == match["library"]] or fitting
+    if any(not np.array_equal(each.wavelengths, same_library[0].wavelengths) for each in same_library):
+        raise ValueError(
+            f"{path}: several wavelength files have {values.size} channels of {spectrometer}: "
+            f"{listed(each.title for each in same_library)}; leave the right one in the folder"
+        )
     return Spectrum(
         " ".join(name).replace("_", " "),
-        fitting[0].wavelengths,
+        same_library[0].wavelengths,
         values,
         str(path),
         specimen=name[1].split(".")[0] if len(name) > 1 else name[0],

@@ -337,6 +337,16 @@ def test_nothing_there(tmp_path):
         br.open_library(tmp_path)
 
 
+def test_two_wavelength_files_that_both_fit(tmp_path):
+    write(tmp_path / "slag.txt", USGS_SPECTRUM)
+    write(tmp_path / "channels.txt", USGS_CHANNELS)
+    write(tmp_path / "other.txt", USGS_CHANNELS.replace("splib07a", "splib07b").replace("0.5", "0.51"))
+    assert br.open_library(tmp_path).wavelength.values[1] == pytest.approx(500)  # the one of the same library
+    write(tmp_path / "third.txt", USGS_CHANNELS.replace("0.5", "0.52"))
+    with pytest.raises(ValueError, match="several wavelength files have 5 channels of TESTa"):
+        br.open_library(tmp_path)
+
+
 def test_a_database_of_another_layout(tmp_path):
     with closing(sqlite3.connect(tmp_path / "other.db")) as connection:
         connection.execute("CREATE TABLE rocks (name TEXT)")
