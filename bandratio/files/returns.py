@@ -46,7 +46,8 @@ def open_returns(
         LAS, LAZ, CSV, Parquet, netCDF (``.nc``, ``.h5``) or Zarr; two files, red first, where each laser has its own.
     red, infrared : str or mapping
         Column of the return energy, e.g. ``"intensity"``. Where the two lasers are told apart by another column,
-        ``{"column": "intensity", "where": {"scanner_channel": 0}}``; where a variable has a second dimension,
+        ``"intensity where scanner_channel=0"``, which is short for ``{"column": "intensity", "where":
+        {"scanner_channel": 0}}``; where a variable has a second dimension,
         ``{"column": "energy", "index": 0}``.
     crs : any, optional
         Map projection of the positions, where the file does not say it.
@@ -191,7 +192,13 @@ def _one(
 
 def _spec(channel: str, given: Any) -> Mapping[str, Any]:
     if isinstance(given, str):
-        return {"column": given}
+        column, told_apart, condition = given.partition(" where ")
+        if not told_apart:
+            return {"column": given}
+        name, _, value = (part.strip() for part in condition.partition("="))
+        if not name or not value:
+            raise ValueError(f"{channel} wants COLUMN where COLUMN=VALUE, got {given!r}")
+        return {"column": column.strip(), "where": {name: _value(value)}}
     if not isinstance(given, Mapping) or "column" not in given:
         raise TypeError(
             f"{channel} must be a column's name or {{'column': …, 'where': {{…}}}}, got {given!r}"
@@ -204,6 +211,13 @@ def _spec(channel: str, given: Any) -> Mapping[str, Any]:
     if given.get("where") is not None and not isinstance(given["where"], Mapping):
         raise TypeError(f"where of {channel} must be {{column: value}}, got {given['where']!r}")
     return given
+
+
+def _value(text: str) -> float | str:
+    try:
+        return float(text)
+    except ValueError:
+        return text
 
 
 def _block_length(chunks: Any, tables: list[ShotTable], apart: bool) -> int | None:

@@ -177,6 +177,12 @@ def test_two_channels_of_one_file_with_the_same_pulses(tmp_path):
     )
     np.testing.assert_array_equal(found["red"], intensity[::2])
     np.testing.assert_array_equal(found["infrared"], intensity[1::2])
+    words = br.open_returns(
+        tmp_path / "both.las",
+        red="intensity where scanner_channel=0",
+        infrared="intensity where scanner_channel=1",
+    )
+    xr.testing.assert_identical(words, found)
     assert found.attrs["n_unpaired_red"] == 0
     assert "spatial_ref" in found.coords
 
@@ -245,6 +251,13 @@ TABLE = "x,y,red,infrared,word\n1,1,5,6,a\n2,2,7,0,b\n"
         ("a.csv", TABLE, PLAIN, ValueError, "a.csv: infrared holds 1 stored zeros of 2.*zero='dropout'"),
         ("a.csv", TABLE, {**PLAIN, "red": "reed"}, ValueError, "no column 'reed'; did you mean red"),
         ("a.csv", TABLE, {**PLAIN, "red": "word"}, ValueError, "column 'word' must hold numbers for red"),
+        (
+            "a.csv",
+            TABLE,
+            {**PLAIN, "red": "red where word"},
+            ValueError,
+            "red wants COLUMN where COLUMN=VALUE",
+        ),
         ("a.csv", TABLE, {**PLAIN, "red": 3}, TypeError, "red must be a column's name or .*got 3"),
         (
             "a.csv",
