@@ -107,8 +107,8 @@ def _draw(plan: LaserPlan, axes: Any) -> None:
         for side in ("top", "right"):
             ax.spines[side].set_visible(False)
     axes[0].set_ylabel(f"least ice found, probability {held['probability']:g} [%]")
-    axes[0].legend(
-        loc="upper left", handlelength=1.5, frameon=True, framealpha=0.9, edgecolor="none", borderpad=0.2
+    axes[1].legend(
+        loc="best", handlelength=1.5, frameon=True, framealpha=0.9, edgecolor="none", borderpad=0.2
     )
 
 
