@@ -3,7 +3,7 @@ from .catalogue import mafic_depth, named_ratio, red_slope, reflectance_700, uv_
 from .composition import iron_oxide, optical_maturity, titanium_oxide
 from .cube import as_cube
 from .cube_findings import check_cube
-from .detection import Threshold, scene_threshold, thresholds
+from .detection import Threshold, read_thresholds, scene_threshold, thresholds, write_thresholds
 from .files import (
     open_cube,
     open_elevation,
@@ -38,6 +38,7 @@ from .photometry import (
     Minnaert,
     TabulatedPhase,
     convert_quantity,
+    fit_photometry,
     masked_pixels,
     normalise,
     require_quantity,

@@ -1,6 +1,7 @@
 """Reflectance quantities, and photometric normalisation to one geometry."""
 
 from .angles import Geometry
+from .fit import PhotometricFit, fit_photometry
 from .hapke import Hapke
 from .laws import Akimov, Lambert, Law, LommelSeeliger, LunarLambert, Minnaert
 from .normalise import masked_pixels, normalise
@@ -20,8 +21,10 @@ __all__ = [
     "LunarLambert",
     "Minnaert",
     "PhaseFunction",
+    "PhotometricFit",
     "TabulatedPhase",
     "convert_quantity",
+    "fit_photometry",
     "geometry_summary",
     "masked_pixels",
     "normalise",

@@ -32,7 +32,6 @@ REASONS = (
 #: How far rounded angles may miss |i − e| ≤ g ≤ i + e [deg] (common practice, no source).
 SLACK_DEG = 0.5
 _MIDDLING_ALBEDO = 0.3
-_FAINTEST = 1e-6
 _MIXED = (Lambert, LommelSeeliger, LunarLambert)
 
 
@@ -134,7 +133,8 @@ class Correction:
         out : ndarray, shape (band, …)
             Where to write; without bands, only the factors are written.
         brightness : ndarray, shape (0, 1 or band, …)
-            Where to write R at the standard geometry over R here [1]: not at all, of the first band, or of each.
+            Where to write by how much R at the standard geometry grows with R here [1], which is their ratio where the
+            law is linear: not at all, of the first band, or of each.
         """
         with np.errstate(all="ignore"):
             mu0, mu = cosine(incidence), cosine(emission)
@@ -144,10 +144,9 @@ class Correction:
                 if band >= max(len(out), len(brightness)):
                     break
                 if isinstance(law, Hapke):
-                    ratio = self._hapke_ratio(law, values[band], mu0, mu, phase, flag)
-                    np.multiply(values[band], ratio, out=out[band])
+                    out[band], slope = self._hapke(law, values[band], mu0, mu, phase, flag)
                     if band < len(brightness):
-                        brightness[band] = ratio
+                        brightness[band] = slope
                     continue
                 if law is not previous:
                     factor = self._factor(law, mu0, mu, phase)
@@ -239,23 +238,21 @@ class Correction:
         b = (log(x0, x + step) - log(x0, x - step)) / (2 * step)
         return a.astype(mu0.dtype), b.astype(mu0.dtype)
 
-    def _hapke_ratio(
+    def _hapke(
         self, law: Hapke, values: NDArray, mu0: NDArray, mu: NDArray, phase: NDArray, flag: NDArray
-    ) -> NDArray:
-        """R at the standard geometry over R here, which for this law depends on R itself."""
+    ) -> tuple[NDArray, NDArray]:
+        """Values at the standard geometry, and their derivative by the values here."""
         used = flag == 0
+        result = np.full((2, *values.shape), np.nan, dtype=values.dtype)
         # the quantity as a reflectance factor, and back at the standard geometry
-        here = values[used].astype(float) / self.per_reff
-        # a reflectance of zero stays zero, and is multiplied as the faintest are
-        here = np.where(here == 0, _FAINTEST, here)
-        geometry = 1.0
+        here = values[used] / self.per_reff
+        there, geometry = self.per_reff, 1.0
         if not self.per_mu0:
             here = here / mu0[used]
-            geometry = self.target.mu0 / mu0[used]
-        seen = law.seen_from(here, mu0[used], mu[used], phase[used], self.target)
-        ratio = np.full(values.shape, np.nan, dtype=values.dtype)
-        ratio[used] = seen / here * geometry
+            there, geometry = self.per_reff * self.target.mu0, self.target.mu0 / mu0[used]
+        seen, slope = law.seen_from(here, mu0[used], mu[used], phase[used], self.target)
+        result[0][used], result[1][used] = seen * there, slope * geometry
         beyond = np.zeros(values.shape, dtype=bool)
         beyond[used] = np.isfinite(here) & ~np.isfinite(seen)
         flag[beyond] = 7
-        return ratio
+        return result[0], result[1]

@@ -157,13 +157,19 @@ class Hapke(Law):
 
     def seen_from(
         self, reflectance_factor: Plane, mu0: Plane, mu: Plane, phase_deg: Plane, target: Geometry
-    ) -> Plane:
-        """REFF at another geometry of what has this REFF here."""
+    ) -> tuple[Plane, Plane]:
+        """REFF at another geometry of what has this REFF here, and its derivative by the REFF here."""
         w = self.albedo(reflectance_factor, mu0, mu, phase_deg)
         known = np.where(np.isfinite(w), w, 0.0)
-        return np.where(
-            np.isfinite(w), self.reflectance_factor(known, target.mu0, target.mu, target.phase), np.nan
-        )
+        here, there = self._geometry(mu0, mu, phase_deg), self._geometry(target.mu0, target.mu, target.phase)
+        # both by γ = √(1 − w), in which their slopes stay finite at w = 1; the step's own length cancels
+        step = 1e-4
+        gamma = np.clip(np.sqrt(1 - known), step, 1 - step)
+        brighter, darker = 1 - (gamma - step) ** 2, 1 - (gamma + step) ** 2
+        rise = self._reflectance(brighter, *there) - self._reflectance(darker, *there)
+        slope = rise / (self._reflectance(brighter, *here) - self._reflectance(darker, *here))
+        seen = self._reflectance(known, *there)
+        return np.where(np.isfinite(w), seen, np.nan), np.where(np.isfinite(w), slope, np.nan)
 
     def disk(self, mu0: Plane, mu: Plane, phase_deg: Plane) -> Plane:
         """Not there: what the disk looks like depends on the albedo."""
