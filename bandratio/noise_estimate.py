@@ -10,7 +10,7 @@ import xarray as xr
 from numpy.typing import ArrayLike, NDArray
 
 from .cube import is_lazy, require_cube
-from .noise import Noise
+from .noise import Noise, brightness_factor_of
 from .registration import band_shifts, misregistration_sigma
 
 __all__ = ["add_misregistration", "estimate_noise"]
@@ -35,7 +35,8 @@ def estimate_noise(cube: xr.DataArray) -> Noise:
     Returns
     -------
     Noise
-        With `random` per band [reflectance]. Errors that all pixels share cannot be seen in one picture: add
+        With `random` per band [reflectance], for the cube as it came: what is seen in a normalised or converted one is
+        divided by its `brightness_factor`. Errors that all pixels share cannot be seen in one picture: add
         ``band_gain``, ``band_offset`` and ``common_gain`` from the calibration report.
 
     Raises
@@ -67,9 +68,10 @@ def estimate_noise(cube: xr.DataArray) -> Noise:
     responses: list[list[NDArray]] = [[] for _ in range(cube.sizes["wavelength"])]
     for square in _squares(cube):
         values = np.asarray(square.values, dtype=float)
+        factor = (xr.ones_like(square, dtype=float) * brightness_factor_of(square)).transpose(*square.dims).values
         for band, picture in enumerate(values):
             second = picture[:, :-2] - 2 * picture[:, 1:-1] + picture[:, 2:]
-            response = second[:-2] - 2 * second[1:-1] + second[2:]
+            response = (second[:-2] - 2 * second[1:-1] + second[2:]) / factor[band, 1:-1, 1:-1]
             responses[band].append(response[np.isfinite(response)] / 6)
     random = {}
     for wavelength, parts in zip(cube["wavelength"].values.tolist(), responses, strict=True):
@@ -137,7 +139,9 @@ def add_misregistration(noise: Noise, cube: xr.DataArray, shifts: ArrayLike | No
     added = xr.DataArray(
         misregistration_sigma(values, moved), {"wavelength": cube["wavelength"].values}, cube.dims
     )
-    before = noise.for_cube(cube).random
+    # noise is stated for the cube as it came, and these slopes are those of the cube as it is
+    added = added / brightness_factor_of(cube)
+    before = noise.for_cube(cube.drop_vars("brightness_factor", errors="ignore")).random
     random = ((before**2 + added**2) ** 0.5).transpose(*cube.dims).fillna(0.0)
     return replace(noise, random=random)
 
