@@ -50,6 +50,9 @@ _PICTURES = (".png", ".pdf", ".svg")
 )
 @click.option("--together", is_flag=True, help="Use two --names together: beyond both thresholds.")
 @click.option("-o", "--output", metavar="OUT.csv", help="Also write the table.")
+@click.option(
+    "--thresholds", "threshold_file", metavar="OUT.json", help="Also write the thresholds, for use on scenes."
+)
 @click.option("--picture", metavar="OUT.png", help="Also draw it (.png, .pdf or .svg).")
 @click.option("--overwrite", is_flag=True, help="Replace outputs that exist.")
 @noise_options
@@ -65,6 +68,9 @@ def command(**given: Any) -> None:
         _output(given["output"], (".csv",), overwrite),
         _output(given["picture"], _PICTURES, overwrite),
     ]
+    threshold_file = _output(given["threshold_file"], (".json",), overwrite)
+    if threshold_file is not None and given["wanted"] is None:
+        raise ValueError("--thresholds needs --wanted and --unwanted: what is to be told from what")
     if (given["wanted"] is None) != (given["unwanted"] is None):
         raise ValueError("thresholds need both --wanted and --unwanted")
     if given["wavelengths"] is None and given["responses"] is None:
@@ -83,6 +89,10 @@ def command(**given: Any) -> None:
             click.echo(f"{title.replace('_', ' ')}: {table.attrs[title]}")
     found = _thresholds(given, centres, widths, library, noise, table, bands)
     click.echo(_thresholds_text(found, table), nl=bool(found))
+    if threshold_file is not None:
+        from ..detection import write_thresholds
+
+        click.echo(f"written to {write_thresholds(found, threshold_file, overwrite=overwrite)}")
     if outputs[0]:
         _write(outputs[0], lambda part: _frame(table).to_csv(part))
     if outputs[1]:

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
 __all__ = ["command", "limit_from"]
 
-_LIMIT = "X[,SIGMA]|scene:Q"
+_LIMIT = "X[,SIGMA]|scene:Q|FILE.json"
 
 
 @click.command(
@@ -82,7 +82,7 @@ def command(
 
 
 def limit_from(maps: xr.Dataset, name: str, text: str | None) -> float | Threshold | None:
-    """A limit as typed: a number, a number and its sigma, or a quantile of the scene.
+    """A limit as typed: a number, a number and its sigma, a quantile of the scene, or a file of thresholds.
 
     Raises
     ------
@@ -91,11 +91,13 @@ def limit_from(maps: xr.Dataset, name: str, text: str | None) -> float | Thresho
     """
     if text is None:
         return None
-    from ..detection import Threshold, scene_threshold
+    from ..detection import Threshold, read_thresholds, scene_threshold
     from ..pyroclastic.cancellation import BRIGHTNESS, SLOPE
 
     parameter = SLOPE if name == "flatter_than" else BRIGHTNESS
     option = f"--{name.replace('_', '-')}"
+    if text.lower().endswith(".json"):
+        return read_thresholds(text, parameter)[parameter]
     try:
         if text.startswith("scene:"):
             quantile = float(text.removeprefix("scene:"))
@@ -105,7 +107,8 @@ def limit_from(maps: xr.Dataset, name: str, text: str | None) -> float | Thresho
                 raise ValueError
     except ValueError:
         raise ValueError(
-            f"{option} wants a number, a number and its sigma such as 0.19,0.01, or scene:0.95, got {text!r}"
+            f"{option} wants a number, a number and its sigma such as 0.19,0.01, scene:0.95, or a FILE.json of "
+            f"thresholds, got {text!r}"
         ) from None
     if text.startswith("scene:"):
         return scene_threshold(maps, parameter, quantile)

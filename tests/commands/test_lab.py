@@ -112,3 +112,54 @@ def test_help_shows_an_example(capsys):
     code, out, _ = run(capsys, "--help")
     assert code == 0
     assert "Example: bandratio lab" in out
+
+
+def test_a_threshold_goes_from_the_laboratory_to_a_scene(capsys, tmp_path):
+    """``lab`` writes it, ``pyroclastic`` uses it, and the flags say where it came from."""
+    import json
+
+    import numpy as np
+    import xarray as xr
+
+    import bandratio as br
+
+    file = tmp_path / "thresholds.json"
+    code, out, _ = run(
+        capsys, *BANDS, "--names", "reflectance_700", "--relative", "0.01", "--wanted", "plagioclase", "--unwanted",
+        "opaque", "--thresholds", str(file),
+    )  # fmt: skip
+    assert code == 0
+    assert f"written to {file}" in out
+    values = np.random.default_rng(0).uniform(0.05, 0.4, (2, 8, 9))
+    scene = xr.DataArray(values, dims=("wavelength", "y", "x"), coords={"wavelength": [600.0, 700.0]})
+    maps = br.parameters(br.as_cube(scene, quantity="reflectance_factor"), br.Noise(random=0.001))
+    br.write_maps(maps, tmp_path / "maps.nc")
+    with pytest.raises(SystemExit) as left:
+        main(
+            [
+                "pyroclastic",
+                str(tmp_path / "maps.nc"),
+                "-o",
+                str(tmp_path / "flags.nc"),
+                "--brighter-than",
+                str(file),
+            ]
+        )
+    assert not left.value.code
+    used = json.loads(br.open_maps(tmp_path / "flags.nc").attrs["thresholds"])["brighter_than"]
+    assert used["origin"] == "laboratory"
+    assert used["value"] == pytest.approx(br.read_thresholds(file)["reflectance_700"].value)
+
+
+def test_a_file_of_thresholds_needs_groups(capsys, tmp_path):
+    code, _, err = run(capsys, *BANDS, "--thresholds", str(tmp_path / "t.json"))
+    assert code == 2
+    assert "--thresholds needs --wanted and --unwanted" in err
+
+
+def test_bands_by_their_response_curves(capsys, tmp_path):
+    file = tmp_path / "filters.csv"
+    file.write_text("wavelength_nm,a,b\n580,0,0\n600,1,0\n620,0,0\n680,0,0\n700,0,1\n720,0,0\n")
+    code, out, _ = run(capsys, "--responses", str(file))
+    assert code == 0
+    assert "11.1" in next(line for line in out.splitlines() if line.startswith("Soil 62231"))

@@ -174,3 +174,27 @@ def test_it_carries_what_the_map_says():
 def test_bad_scene_thresholds(maps, name, quantile, error, message):
     with pytest.raises(error, match=message):
         br.scene_threshold(maps, name, quantile)
+
+
+# ---- thresholds in a file
+
+
+def test_a_file_of_thresholds_round_trips(tmp_path):
+    spectra = br.reference_spectra([600, 700, 830])
+    made = br.thresholds(spectra, "mafic_depth", "olivine", "plagioclase", noise=br.Noise(relative=0.01))
+    file = br.write_thresholds(made, tmp_path / "thresholds.json")
+    assert br.read_thresholds(file) == made
+    assert br.read_thresholds(file, "mafic_depth") == made
+    assert json.loads(file.read_text())["mafic_depth"]["separation"]["n_unwanted"] == 4
+    assert [path.name for path in tmp_path.iterdir()] == ["thresholds.json"]
+    with pytest.raises(FileExistsError, match="exists already"):
+        br.write_thresholds(made, file)
+    with pytest.raises(ValueError, match=r"holds no threshold of 'mafic_deth'; did you mean mafic_depth"):
+        br.read_thresholds(file, "mafic_deth")
+
+
+@pytest.mark.parametrize("text", ["no json", "[1, 2]", '{"red_slope": 9}', '{"red_slope": {"sigma": 1}}'])
+def test_files_that_hold_no_thresholds(tmp_path, text):
+    (tmp_path / "thresholds.json").write_text(text)
+    with pytest.raises(ValueError, match=r"thresholds\.json: not a file of thresholds"):
+        br.read_thresholds(tmp_path / "thresholds.json")
