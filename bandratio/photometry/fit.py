@@ -204,7 +204,7 @@ def fit_photometry(
     values, half, scatter = (np.array(part) for part in zip(*found, strict=True))
     return PhotometricFit(
         law,
-        cube["wavelength"].values.astype(float),
+        cube["wavelength"].to_numpy().astype(float),
         values,
         values - half,
         values + half,
@@ -225,11 +225,11 @@ def _thinned(
     pixels = math.prod(cube.sizes[dim] for dim in dims)
     step = max(1, math.ceil((pixels / most) ** (1 / len(dims))))
     thin = {dim: slice(None, None, step) for dim in dims}
-    values = cube.isel(thin).values.astype(float)
+    values = cube.isel(thin).to_numpy().astype(float)
     shape = values.shape[1:]
     flat = {
         name: np.broadcast_to(
-            plane.isel({dim: thin[dim] for dim in plane.dims}).values.astype(float), shape
+            plane.isel({dim: thin[dim] for dim in plane.dims}).to_numpy().astype(float), shape
         ).reshape(-1)
         for name, plane in planes.items()
     }
