@@ -74,7 +74,9 @@
       });
     }
     tell();
-    document.documentElement.dataset.ready = "yes";
+    (function settled() {
+      if (views.is_idle) document.documentElement.dataset.ready = "yes"; else setTimeout(settled, 50);
+    })();
   });
 
   for (const button of document.querySelectorAll("th button")) {
