@@ -39,6 +39,9 @@ def main(arguments: list[str] | None = None) -> None:
     except click.exceptions.Abort:
         click.echo("bandratio: stopped", err=True)
         sys.exit(130)
+    except click.exceptions.NoArgsIsHelpError as error:
+        click.echo(error.format_message())
+        sys.exit(0)
     except click.ClickException as error:
         click.echo(f"bandratio: {' '.join(error.format_message().split())}", err=True)
         sys.exit(2)

@@ -12,7 +12,7 @@ from .bands import TOLERANCE_NM
 from .maps import parameters
 from .noise import Noise
 from .ratio import BandRatio
-from .spectra import Responses, band_average, chosen_samples, reference_spectra
+from .spectra import Responses, band_average, chosen_samples, reference_spectra, without_value
 
 __all__ = ["material_table"]
 
@@ -81,7 +81,5 @@ def material_table(
             "a table of materials has no pixels: give noise without maps and without shared_within"
         )
     table = parameters(averaged, noise, names, tolerance=tolerance)
-    missing = str(averaged.attrs.get("left_out", ""))
-    if missing:
-        table.attrs["materials_left_out"] = missing
+    table.attrs["materials_left_out"] = without_value(averaged)
     return table

@@ -117,7 +117,8 @@ def compare_filter_sets(
     -----
     Each set is used whole: the best contrast of its log reflectances, a product of band ratios. It is trained without
     one wanted and one unwanted specimen and then has to tell those two apart, through the set's own noise. So a set
-    is not favoured for having more bands: bands that only fit the training specimens lose on the others. The sets see
+    is not favoured for having more bands: bands that only fit the training specimens lose on the others. Gain and offset
+    errors of a band count as if new in each specimen, as for a threshold that is carried from one camera to another. The sets see
     the same pairs, and differences are taken pair by pair; their intervals come from a bootstrap over specimens and
     hold together (Bonferroni).
 

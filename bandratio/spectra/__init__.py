@@ -2,7 +2,7 @@
 
 from .averaging import Responses, band_average, effective_wavelength
 from .library import open_library
-from .reference import reference_spectra
+from .reference import reference_spectra, without_value
 from .selection import chosen_samples
 
 __all__ = [
@@ -12,4 +12,5 @@ __all__ = [
     "effective_wavelength",
     "open_library",
     "reference_spectra",
+    "without_value",
 ]

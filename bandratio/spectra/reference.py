@@ -13,7 +13,7 @@ from .averaging import Responses, average_or_refuse
 from .library import on_one_grid
 from .tables import read_table
 
-__all__ = ["reference_spectra"]
+__all__ = ["reference_spectra", "without_value"]
 
 
 def reference_spectra(
@@ -51,7 +51,8 @@ def reference_spectra(
     -----
     The laboratory rows are the published spectra interpolated linearly (channels 1–12 nm apart below 2 µm) at every
     10 nm to 1100 nm and 20 nm beyond, and every 10 nm from 1400 to 1600 nm, given to four digits. The soil and the
-    lunar means stand at their own published points. The means are equigonal albedos at 6° phase: brighter than at
+    lunar means stand at their own published points. Bands of 20 nm through the table differ from bands through the whole
+    spectra by 2e-4 in the median and by at most 0.005, on the steepest flanks. The means are equigonal albedos at 6° phase: brighter than at
     the laboratory's 30° by the opposition effect; their colours compare, their levels do so only roughly.
 
     References
@@ -70,7 +71,7 @@ def reference_spectra(
     if wavelengths is None and fwhm is None and responses is None:
         return table
     averaged = average_or_refuse(table, wavelengths, fwhm, responses)
-    missing = averaged.isnull().transpose("sample", "wavelength")
+    missing = averaged.isnull()
     nowhere = averaged["wavelength"].values[missing.all("sample").values]
     if nowhere.size:
         known = table["wavelength"].values
@@ -78,12 +79,13 @@ def reference_spectra(
             f"the reference table has no points for the band at {listed(nowhere.tolist(), 'nm')}; it reaches from "
             f"{known[0]:g} to {known[-1]:g} nm in steps of 10 to 50 nm"
         )
-    averaged.attrs["left_out"] = _left_out(missing)
+    averaged.attrs["left_out"] = without_value(averaged)
     return averaged
 
 
-def _left_out(missing: xr.DataArray) -> str:
-    """Which materials have no value, and at which bands: one clause for each list of bands."""
+def without_value(averaged: xr.DataArray) -> str:
+    """Which samples have no value, and at which bands: one clause for each list of bands."""
+    missing = averaged.isnull().transpose("sample", "wavelength")
     bands = missing["wavelength"].values
     of_bands: dict[tuple[float, ...], list[str]] = {}
     for sample, row in zip(missing["sample"].values, missing.values, strict=True):

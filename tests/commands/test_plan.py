@@ -93,3 +93,10 @@ def test_help_shows_an_example(capsys):
         code, out, _ = run(capsys, word, "--help")
         assert code == 0
         assert f"Example: bandratio plan {word}" in out
+
+
+def test_no_word_at_all_is_answered_with_the_help(capsys):
+    code, out, err = run(capsys)
+    assert (code, err) == (0, "")
+    assert "bands" in out
+    assert out.count("\n") > 5
