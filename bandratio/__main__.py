@@ -41,7 +41,7 @@ def main(arguments: list[str] | None = None) -> None:
         sys.exit(130)
     except click.exceptions.NoArgsIsHelpError as error:
         click.echo(error.format_message())
-        sys.exit(0)
+        sys.exit(2)
     except click.ClickException as error:
         click.echo(f"bandratio: {' '.join(error.format_message().split())}", err=True)
         sys.exit(2)

@@ -97,6 +97,6 @@ def test_help_shows_an_example(capsys):
 
 def test_no_word_at_all_is_answered_with_the_help(capsys):
     code, out, err = run(capsys)
-    assert (code, err) == (0, "")
+    assert (code, err) == (2, "")
     assert "bands" in out
     assert out.count("\n") > 5
