@@ -143,6 +143,8 @@ class _Sums:
         self.band, self.centres = band, centres
         self.pixels = np.zeros((regions, groups))
         self.reflectance = np.zeros((centres.size, regions, groups))
+        # sums of the brightness factor, which is one unless given
+        self.factor = np.zeros((centres.size, regions, groups))
         self.random = np.zeros((centres.size, regions))
         self.overlap_names = np.empty((0, 2), dtype=np.int64)
         self.overlap_random = np.zeros((centres.size, 0))
@@ -172,8 +174,8 @@ class _Sums:
         if band is not None:
             held = {
                 part: getattr(band, part).isel(wavelength=used)
-                for part in ("random", "relative", "band_gain", "band_offset", "shot")
-                if "wavelength" in getattr(band, part).dims
+                for part in ("random", "relative", "band_gain", "band_offset", "shot", "brightness_factor")
+                if "wavelength" in getattr(getattr(band, part), "dims", ())
             }
             band = replace(band, **held)
         cube = cube.isel(wavelength=used)
@@ -184,7 +186,8 @@ class _Sums:
         sums.overlap_names = overlaps.names
         sums.overlap_random = np.zeros((sums.centres.size, len(overlaps.names)))
         sums.overlap_common = np.zeros((sums.centres.size, sums.centres.size, len(overlaps.names)))
-        for start, R, random_map, gain in _stripes(cube, band):
+        for start, R, planes in _stripes(cube, band):
+            gain = planes.get("pixel_gain")
             here = slice(*np.searchsorted(members.pixel, [start, start + R.shape[1]]))
             pixel, region = members.pixel[here] - start, members.region[here]
             # a row of float64 for each band of the region's pixels, and of those only what has every band
@@ -192,48 +195,59 @@ class _Sums:
             whole = np.isfinite(chosen).all(axis=0)
             chosen, region, pixel = chosen[:, whole], region[whole], pixel[whole]
             of_group = np.zeros(pixel.size, dtype=np.int64) if group is None else group[pixel + start]
-            sums._add(chosen, region, of_group)
+            sums._add(chosen, planes.get("brightness_factor"), pixel, region, of_group)
             sums._add_spread(evaluate(chosen, table)[:, 0], region)
             if band is None:
                 continue
-            sums.random += sums._random_variance(chosen, pixel, random_map, region, sums.random.shape[1])
+            sums.random += sums._random_variance(chosen, pixel, planes, region, sums.random.shape[1])
             if gain is not None:
-                sums.common += _common_covariance(chosen, gain[pixel], region, sums.random.shape[1])
+                sums.common += _common_covariance(chosen, gain[0, pixel], region, sums.random.shape[1])
             both = slice(*np.searchsorted(overlaps.pixel, [start, start + R.shape[1]]))
             if both.stop > both.start:
                 twice, pair = overlaps.pixel[both] - start, overlaps.region[both]
                 of_both = R[:, twice].astype(float)
                 good = np.isfinite(of_both).all(axis=0)
                 sums.overlap_random += sums._random_variance(
-                    of_both[:, good], twice[good], random_map, pair[good], len(overlaps.names)
+                    of_both[:, good], twice[good], planes, pair[good], len(overlaps.names)
                 )
                 if gain is not None:
                     sums.overlap_common += _common_covariance(
-                        of_both[:, good], gain[twice[good]], pair[good], len(overlaps.names)
+                        of_both[:, good], gain[0, twice[good]], pair[good], len(overlaps.names)
                     )
         return sums
 
-    def _add(self, R: NDArray, region: NDArray, group: NDArray) -> None:
+    def _add(
+        self, R: NDArray, factor: NDArray | None, pixel: NDArray, region: NDArray, group: NDArray
+    ) -> None:
         regions, groups = self.pixels.shape
         key = region * groups + group
-        self.pixels += np.bincount(key, minlength=regions * groups).reshape(regions, groups)
+        count = np.bincount(key, minlength=regions * groups).reshape(regions, groups)
+        self.pixels += count
+        if factor is None:
+            self.factor += count
+        else:
+            rows = [np.bincount(key, row[pixel], regions * groups) for row in factor]
+            self.factor += np.reshape(rows, (len(rows), regions, groups))
         for j, row in enumerate(R):
             self.reflectance[j] += np.bincount(key, row, regions * groups).reshape(regions, groups)
 
     def _random_variance(
-        self, R: NDArray, pixel: NDArray, random_map: NDArray | None, region: NDArray, regions: int
+        self, R: NDArray, pixel: NDArray, planes: dict[str, NDArray], region: NDArray, regions: int
     ) -> NDArray[np.float64]:
         """Sum over the pixels of each region of every band's random variance, shape (band, region)."""
         assert self.band is not None
+
+        def of_band(name: str, j: int) -> NDArray[np.float64]:
+            plane = planes[name]
+            row: NDArray[np.float64] = plane[j if plane.shape[0] > 1 else 0, pixel].astype(float)
+            return row
+
         total = np.empty((R.shape[0], regions))
         for j, row in enumerate(R):
-            variance = (
-                self.band.shot.values[j] ** 2 * np.maximum(row, 0) + (self.band.relative.values[j] * row) ** 2
-            )
-            if random_map is None:
-                variance += self.band.random.values[j] ** 2
-            else:
-                variance += random_map[j if random_map.shape[0] > 1 else 0, pixel].astype(float) ** 2
+            f = of_band("brightness_factor", j) if "brightness_factor" in planes else 1.0
+            random = of_band("random", j) if "random" in planes else self.band.random.values[j]
+            shot, relative = self.band.shot.values[j], self.band.relative.values[j]
+            variance = (f * random) ** 2 + f * shot**2 * np.maximum(row, 0) + (relative * row) ** 2
             total[j] = np.bincount(region, variance, regions)
         return total
 
@@ -286,33 +300,31 @@ def _groups(noise: Noise | None, cube: xr.DataArray) -> tuple[NDArray[np.int64] 
     return group.reshape(-1).astype(np.int64), names.size
 
 
-def _stripes(
-    cube: xr.DataArray, band: BandNoise | None
-) -> Iterator[tuple[int, NDArray, NDArray | None, NDArray | None]]:
-    """First pixel, reflectances (band, pixel), maps of random noise and of gain errors of one stripe after another."""
+def _stripes(cube: xr.DataArray, band: BandNoise | None) -> Iterator[tuple[int, NDArray, dict[str, NDArray]]]:
+    """First pixel, reflectances (band, pixel) and what of the noise differs by pixel of one stripe after another."""
     first = cube.dims[1] if cube.ndim > 1 else None
-    random = None if band is None or band.random.dims == ("wavelength",) else band.random
-    if random is not None:
-        random = random if "wavelength" in random.dims else random.expand_dims("wavelength")
-        missing = {dim: cube.sizes[dim] for dim in cube.dims[1:] if dim not in random.dims}
-        random = random.expand_dims(missing).transpose(*cube.dims)
-    gain = None if band is None or not isinstance(band.pixel_gain, xr.DataArray) else band.pixel_gain
-    if gain is not None:
-        gain = gain.transpose(*cube.dims[1:])
+    planes: dict[str, xr.DataArray] = {}
+    for name in () if band is None else ("random", "pixel_gain", "brightness_factor"):
+        plane = getattr(band, name)
+        if isinstance(plane, xr.DataArray) and plane.dims != ("wavelength",):
+            plane = plane if "wavelength" in plane.dims else plane.expand_dims("wavelength")
+            missing = {dim: cube.sizes[dim] for dim in cube.dims[1:] if dim not in plane.dims}
+            planes[name] = plane.expand_dims(missing).transpose(*cube.dims)
     if first is None or not is_lazy(cube):
         stops = [cube.sizes[first] if first is not None else 1]
     else:
         assert cube.chunks is not None
         stops = np.cumsum(cube.chunks[1]).tolist()
     row = cube[0].size // max(cube.sizes[first], 1) if first is not None else 1
+
+    def flat(array: xr.DataArray, start: int, stop: int) -> NDArray:
+        part = array if first is None else array.isel({first: slice(start, stop)})
+        return np.asarray(part.values).reshape(array.shape[0], -1)
+
     start = 0
     for stop in stops:
-        part = cube if first is None else cube.isel({first: slice(start, stop)})
-        of_map = random if random is None or first is None else random.isel({first: slice(start, stop)})
-        per_pixel = None if of_map is None else np.asarray(of_map.values).reshape(of_map.shape[0], -1)
-        of_gain = gain if gain is None or first is None else gain.isel({first: slice(start, stop)})
-        flat = None if of_gain is None else np.asarray(of_gain.values).reshape(-1)
-        yield start * row, np.asarray(part.values).reshape(cube.shape[0], -1), per_pixel, flat
+        here = {name: flat(plane, start, stop) for name, plane in planes.items()}
+        yield start * row, flat(cube, start, stop), here
         start = stop
 
 
@@ -321,7 +333,7 @@ def _propagate(
 ) -> dict[str, NDArray]:
     n = sums.pixels.sum(axis=1)
     with np.errstate(invalid="ignore", divide="ignore"):
-        share = sums.pixels / n[:, None]  # (region, group)
+        factor = sums.factor / n[:, None]  # (band, region, group)
         part = sums.reflectance / n[:, None]  # (band, region, group)
     mean = xr.DataArray(part.sum(axis=2), {"wavelength": sums.centres}, ("wavelength", "region"))
     value = ratio.value(mean, tolerance=tolerance).values
@@ -333,8 +345,8 @@ def _propagate(
         random = random / n**2 * np.minimum(correlation_area, n)
     # one column for each independent shared error: each band's gain and offset, and the common gain, in each group
     columns = [g[:, :, None] * sums.band.band_gain.values[:, None, None] * part]
-    columns.append(g[:, :, None] * sums.band.band_offset.values[:, None, None] * share)
-    if not (ratio.is_pure and share.shape[1] == 1):
+    columns.append(g[:, :, None] * sums.band.band_offset.values[:, None, None] * factor)
+    if not (ratio.is_pure and factor.shape[2] == 1):
         columns.append(sums.band.common_gain * (g[:, :, None] * part).sum(axis=0, keepdims=True))
     errors = np.concatenate(columns).transpose(1, 0, 2).reshape(n.size, -1)
     shared = (errors**2).sum(axis=1)
