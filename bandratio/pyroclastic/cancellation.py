@@ -42,6 +42,9 @@ class KnownNoise:
         True where gains and offsets are shared within the images of a mosaic, not by the whole scene.
     scale : float
         c of the slope [% per 100 nm].
+    rescaled : bool
+        True where the cube's own `brightness_factor` or `pixel_gain` entered the sigmas, which the maps do not hold in
+        full: what offsets amount to in a pixel is then not known from here.
     """
 
     shot: NDArray[np.float64]
@@ -51,6 +54,7 @@ class KnownNoise:
     common_gain: float
     mosaic: bool
     scale: float
+    rescaled: bool = False
 
     @classmethod
     def of(cls, maps: xr.Dataset) -> KnownNoise | None:
@@ -76,6 +80,7 @@ class KnownNoise:
             common_gain=float(told.get("common_gain", 0)),
             mosaic="shared_within" in told,
             scale=_GRADIENT_SCALE / (two[1] - two[0]),
+            rescaled="noise_of_the_cube" in maps.attrs,
         )
 
     @property

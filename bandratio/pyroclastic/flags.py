@@ -36,7 +36,7 @@ class _Condition:
     sigma: str | None
     kept: KnownNoise | None
     variance: float
-    growth: tuple[float, float]
+    growth: tuple[float, float, float]
     told: str
 
     @property
@@ -211,6 +211,9 @@ def _condition(maps: xr.Dataset, argument: str, limit: Threshold, noise: KnownNo
     elif noise.mosaic and noise.has_shared:
         variance += _at_threshold(maps, limit, noise)
         told = "whole sigma, and the shared part at the threshold, since images of a mosaic do not share their errors"
+    elif noise.rescaled and noise.band_offset.any():
+        variance += _at_threshold(maps, limit, noise)
+        told = "whole sigma, and the shared part at the threshold, since offsets were scaled with the cube"
     elif f"{parameter}_sigma_random" not in maps:
         told = "whole sigma, since the maps hold no parts (parts=True): more than is needed against the scene itself"
         if noise.band_offset.any():
@@ -222,29 +225,33 @@ def _condition(maps: xr.Dataset, argument: str, limit: Threshold, noise: KnownNo
             kept = noise
             variance += _at_threshold(maps, limit, noise)
             told += "; offsets do not, and are kept"
-    growth = (0.0, 0.0)
+    growth = (0.0, 0.0, 0.0)
     if sigma is not None and noise is not None and argument == "darker_than":
-        growth = noise.growth(shared=counted)
+        growth = (0.0, 0.0, 1.0) if noise.rescaled else (*noise.growth(shared=counted), 0.0)
     return _Condition(parameter, sign, limit, compared, sigma, kept, variance, growth, told)
 
 
 def _at_threshold(maps: xr.Dataset, limit: Threshold, noise: KnownNoise) -> float:
     """Variance of a threshold from the scene by the errors that do not cancel: its mean over pixels near it."""
-    if limit.parameter == BRIGHTNESS:
+    name = limit.parameter
+    if name == BRIGHTNESS and not noise.rescaled:
         return float(noise.not_cancelling(BRIGHTNESS, np.array(limit.value), None))
-    step = int(np.ceil(max(1.0, maps[SLOPE].size / _SAMPLE) ** (1 / max(maps[SLOPE].ndim, 1))))
-    thin = (slice(None, None, step),) * maps[SLOPE].ndim
-    dims = maps[SLOPE].dims
-    R, S = (
-        np.asarray(maps[name].transpose(*dims)[thin].values, dtype=float).ravel()
-        for name in (BRIGHTNESS, SLOPE)
+    shared = next(f"{name}{part}" for part in ("_sigma_shared", "_sigma") if f"{name}{part}" in maps)
+    values = maps[name]
+    step = int(np.ceil(max(1.0, values.size / _SAMPLE) ** (1 / max(values.ndim, 1))))
+    thin = (slice(None, None, step),) * values.ndim
+    here, R, sigma = (
+        np.asarray(maps[each].transpose(*values.dims)[thin].values, dtype=float).ravel()
+        for each in (name, BRIGHTNESS, shared)
     )
-    whole = np.isfinite(R) & np.isfinite(S) & (R > 0)
-    R, S = R[whole], S[whole]
-    if R.size == 0:
+    whole = np.isfinite(here) & np.isfinite(sigma) & (R > 0)
+    if not whole.any():
         return 0.0
-    near = np.argsort(np.abs(S - limit.value))[: max(50, R.size // 100)]
-    return float(noise.not_cancelling(SLOPE, R[near], S[near]).mean())
+    here, R, sigma = here[whole], R[whole], sigma[whole]
+    near = np.argsort(np.abs(here - limit.value))[: max(50, R.size // 100)]
+    if noise.rescaled:
+        return float((sigma[near] ** 2).mean())
+    return float(noise.not_cancelling(name, R[near], here[near]).mean())
 
 
 def _p_values(maps: xr.Dataset, rules: list[list[_Condition]]) -> Any:

@@ -15,7 +15,7 @@ __all__ = ["SETTINGS", "flags_of", "p_values"]
 #: Below this many pixels a second thread costs more than it brings.
 _THREAD_PIXELS = 65_536
 #: Columns of a condition's settings: see `p_values`.
-SETTINGS = ("sign", "limit", "variance", "per_reflectance", "per_square")
+SETTINGS = ("sign", "limit", "variance", "per_reflectance", "per_square", "in_proportion")
 
 
 def p_values(
@@ -36,10 +36,10 @@ def p_values(
         Its standard uncertainty; None: the comparison is exact.
     kept : list of ndarray or None, shape (pixel,)
         Variance to be added for each pixel.
-    settings : ndarray, shape (condition, 5)
+    settings : ndarray, shape (condition, 6)
         ``sign``: +1 for above, −1 for below; ``limit``: the threshold; ``variance``: the same for all pixels;
         ``per_reflectance`` and ``per_square``: growth of the variance from the measured value up to the limit,
-        per R and per R².
+        per R and per R²; ``in_proportion``: 1 where sigma is taken to grow in proportion to the reflectance.
     threads : int
         How many threads share the pixels.
 
@@ -92,6 +92,9 @@ def _z(value, i, sigma, kept, setting):  # type: ignore[no-untyped-def]
     if beyond > 0.0 and measured < limit:
         held = max(measured, 0.0)
         variance += setting[3] * (limit - held) + setting[4] * (limit * limit - held * held)
+        if setting[5] != 0.0 and sigma.size and sigma[i] > 0.0:
+            share = limit / held
+            variance += float(sigma[i]) * float(sigma[i]) * (share * share - 1.0)
     if variance == 0.0:
         return np.inf if beyond > 0.0 else (-np.inf if beyond <= 0.0 else np.nan)
     return beyond / math.sqrt(variance)

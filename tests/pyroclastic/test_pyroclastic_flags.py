@@ -188,6 +188,28 @@ def test_errors_that_grow_are_taken_at_the_limit_for_dark_pixels():
     )
 
 
+def test_noise_that_was_scaled_with_the_cube_is_not_made_smaller():
+    """Offsets of a rescaled cube are taken whole, and dark pixels at the limit's brightness."""
+    cube = scene().astype(np.float64)
+    noise = br.Noise(random=0.001, band_offset=0.001)
+    scaled = cube.assign_coords(brightness_factor=(("y", "x"), np.full(cube.shape[1:], 1.5)))
+    maps = br.parameters(scaled, noise, parts=True)
+    slope = br.Threshold(7.0, origin="scene", parameter=SLOPE)
+    flags = br.pyroclastic_flags(maps, brighter_than=0.17, flatter_than=slope)
+    shared = maps[SLOPE + "_sigma_shared"].values
+    near = np.argsort(np.abs(maps[SLOPE].values - 7.0), axis=None)[:50]
+    sigma = np.hypot(maps[SLOPE + "_sigma"], np.sqrt((shared.ravel()[near] ** 2).mean()))
+    p = np.maximum(
+        norm.cdf((0.17 - maps[BRIGHTNESS]) / maps[BRIGHTNESS + "_sigma"]),
+        norm.cdf((maps[SLOPE] - 7.0) / sigma),
+    )
+    np.testing.assert_allclose(flags.p_bright, p, rtol=1e-9, atol=1e-300)
+    dark = br.pyroclastic_flags(maps, darker_than=0.07)
+    R = maps[BRIGHTNESS].values
+    held = maps[BRIGHTNESS + "_sigma"].values * np.maximum(0.07 / R, 1)
+    np.testing.assert_allclose(dark.p_dark, norm.cdf((R - 0.07) / held), rtol=1e-9, atol=1e-300)
+
+
 def test_lazy_flags_equal_those_in_memory():
     cube = scene((60, 70))
     noise = br.Noise(random=0.001, band_offset=0.001)
