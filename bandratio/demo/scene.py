@@ -53,7 +53,7 @@ def material_spectra(wavelengths: Sequence[float]) -> NDArray[np.float64]:
     )
 
 
-def see(basin: Basin, seed: int = 600) -> xr.Dataset:
+def see(basin: Basin, seed: int = 600, *, noise: Noise = NOISE) -> xr.Dataset:
     """Cube of the basin, its geometry, and the truth behind it.
 
     Parameters
@@ -62,6 +62,8 @@ def see(basin: Basin, seed: int = 600) -> xr.Dataset:
         The place.
     seed : int
         Of the errors.
+    noise : Noise
+        Their sizes, the same in every band.
 
     Returns
     -------
@@ -88,10 +90,10 @@ def see(basin: Basin, seed: int = 600) -> xr.Dataset:
 
     rng = np.random.default_rng(seed)
     z = rng.standard_normal
-    spread = np.sqrt(NOISE.random**2 + NOISE.shot**2 * seen)
-    seen = seen * (1 + NOISE.common_gain * z()) * (
-        1 + NOISE.band_gain * z((5, 1, 1))
-    ) + NOISE.band_offset * z((5, 1, 1))
+    spread = np.sqrt(noise.random**2 + noise.shot**2 * seen)
+    seen = seen * (1 + noise.common_gain * z()) * (
+        1 + noise.band_gain * z((5, 1, 1))
+    ) + noise.band_offset * z((5, 1, 1))
     seen = seen + spread * z(seen.shape)
 
     scene = geometry.assign(elevation=dem.astype(np.float32))
