@@ -56,22 +56,34 @@ def parameters_of(
 ) -> dict[str, Specimens]:
     """Each ratio of the samples of one group, with the errors of its numerator and denominator.
 
+    Samples that lack one of the ratios are left out of all.
+
     Raises
     ------
     ValueError
         If fewer than two specimens have a value.
     """
     names = specimen_names(cube)
-    found = {}
-    for name, ratio in ratios.items():
-        value = ratio.value(cube, tolerance=tolerance).values
-        found[name] = Specimens.build(value, form_errors(ratio, cube, noise, tolerance), names)
-        if found[name].count < 2:
+    values = {name: ratio.value(cube, tolerance=tolerance).values for name, ratio in ratios.items()}
+    for name, each in values.items():
+        count = np.unique(names[np.isfinite(each)]).size
+        if count < 2:
             raise ValueError(
-                f"{name} has a value for {found[name].count} specimen of a group; the others have no channels at its "
-                "bands, or their denominator is not positive"
+                f"{name} has a value for {count} specimen of a group; the others have no channels at its bands, or "
+                "their denominator is not positive"
             )
-    return found
+    # two parameters are judged on the same samples
+    whole = np.all([np.isfinite(each) for each in values.values()], axis=0)
+    if np.unique(names[whole]).size < 2:
+        raise ValueError(
+            f"{listed(values)} have values for different specimens, and fewer than two of a group have both"
+        )
+    return {
+        name: Specimens.build(
+            np.where(whole, values[name], np.nan), form_errors(ratio, cube, noise, tolerance), names
+        )
+        for name, ratio in ratios.items()
+    }
 
 
 def form_errors(

@@ -206,11 +206,6 @@ def _crossing(limits: NDArray, rates: NDArray, rate: float, at: int, *, smooth: 
 def _pair(cuts: list[_Cut], rate: float) -> tuple[list[tuple[float, float]], list[Separation]]:
     """Two thresholds together: the pair that finds most of the wanted at the false alarm rate."""
     counts = cuts[0].wanted.count, cuts[0].unwanted.count
-    if any((cut.wanted.count, cut.unwanted.count) != counts for cut in cuts):
-        raise ValueError(
-            f"{cuts[0].name} and {cuts[1].name} do not have values for the same specimens; leave out samples that "
-            "lack a band"
-        )
     points = _PAIR_GRID if sum(counts) <= 200 else _PAIR_GRID // 2
     limits = [_limits(cut, points) for cut in cuts]
     shape = limits[0].size, limits[1].size

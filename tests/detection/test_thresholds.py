@@ -343,3 +343,27 @@ def test_a_parameter_that_a_group_does_not_have():
     spectra = TABLE.where(TABLE.group != "plagioclase")
     with pytest.raises(ValueError, match="mafic_depth has a value for 0 specimen of a group"):
         br.thresholds(spectra, "mafic_depth", "olivine", "plagioclase")
+
+
+def test_two_parameters_are_judged_on_the_same_samples():
+    """A sample that lacks one band must not shift the other parameter's values against it."""
+    names, groups = ["r950_r750", "red_slope"], ("olivine", "plagioclase")
+    spectra = br.reference_spectra([600, 700, 750, 950])
+    holed = spectra.where(~((spectra.sample == "Olivine GDS70.a Fo89 165 µm") & (spectra.wavelength == 700)))
+    without = spectra.isel(sample=spectra.sample.values != "Olivine GDS70.a Fo89 165 µm")
+    one, other = (
+        br.thresholds(each, names, *groups, noise=br.Noise(relative=0.01), false_alarm_rate=0.1)
+        for each in (holed, without)
+    )
+    assert one == other
+    apart = spectra.where(
+        ~((spectra.group == "plagioclase") & (spectra.wavelength == 700) & (spectra.specimen != "HS17"))
+    ).where(~((spectra.specimen == "HS17") & (spectra.wavelength == 950)))
+    with pytest.raises(ValueError, match="red_slope has a value for 1 specimen of a group"):
+        br.thresholds(apart, names, *groups)
+    crossed = spectra.where(
+        ~((spectra.wavelength == 700) & spectra.specimen.isin(["HS17", "HS105"]))
+        & ~((spectra.wavelength == 950) & spectra.specimen.isin(["GDS28", "HS349"]))
+    )
+    with pytest.raises(ValueError, match="r950_r750, red_slope have values for different specimens"):
+        br.thresholds(crossed, names, *groups)
