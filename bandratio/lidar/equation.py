@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["albedo_per_energy", "live_fraction", "return_variance"]
+__all__ = ["albedo_per_energy", "live_fraction", "return_variance", "sigma_of_likely_count"]
 
 
 def albedo_per_energy(
@@ -92,3 +92,32 @@ def return_variance(
     counted = np.maximum(np.asarray(energy, dtype=float), 0) + background
     counting = energy_per_count * (counted + energy_per_count) if energy_per_count else 0.0 * counted
     return np.asarray(counting / np.asarray(live) + background_sigma**2 + read_noise**2)
+
+
+def sigma_of_likely_count(sigma: ArrayLike, per_count: ArrayLike, z: float = 5.0) -> NDArray[np.float64]:
+    """Sigma that a measured value would have, were its true count so high that the measured one lies z sigmas below.
+
+    For n counts the true mean μ with μ − n = z√μ is μ = n + z²/2 + z√(n + z²/4) (Wilson's score interval, for
+    counts). A test of whether a value is too low for a given mean holds down to Φ(−z) with this sigma, and does not
+    with the sigma of the measured count.
+
+    Parameters
+    ----------
+    sigma : array_like
+        Sigma at the measured value.
+    per_count : array_like
+        Value of one count, in the same unit; 0 leaves sigma as it is.
+    z : float
+        Sigmas.
+
+    References
+    ----------
+    Wilson 1927, J. Am. Stat. Assoc. 22, 209, doi:10.1080/01621459.1927.10502953.
+
+    Examples
+    --------
+    >>> sigma_of_likely_count([10.0], [1.0], z=2.0).round(2).tolist()  # of 100 counts: √122.1
+    [11.05]
+    """
+    variance, one = np.square(np.asarray(sigma, dtype=float)), np.asarray(per_count, dtype=float) * z
+    return np.asarray(np.sqrt(variance + one**2 / 2 + one * np.sqrt(variance + one**2 / 4)))

@@ -17,8 +17,8 @@ __all__ = ["grid_returns"]
 
 _SUMS = (
     "n", "dropouts", "incidence",
-    "red", "red_additive", "red_common", "red_scaling", "red_shared",
-    "infrared", "infrared_additive", "infrared_common", "infrared_scaling", "infrared_shared", "covariance",
+    "red", "red_additive", "red_counting", "red_common", "red_scaling", "red_shared",
+    "infrared", "infrared_additive", "infrared_counting", "infrared_common", "infrared_scaling", "infrared_shared", "covariance",
 )  # fmt: skip
 _BLOCK = 1_000_000
 
@@ -114,7 +114,16 @@ def grid_returns(albedos: xr.Dataset, like: xr.DataArray | xr.Dataset, *, pool: 
     return _described(grid, albedos)
 
 
-_NEEDED = ("", "_sigma_additive", "_sigma_common", "_relative", "_sigma_shared", "_limit", "_quality")
+_NEEDED = (
+    "",
+    "_sigma_additive",
+    "_sigma_common",
+    "_per_count",
+    "_relative",
+    "_sigma_shared",
+    "_limit",
+    "_quality",
+)
 
 
 def _axis(like: xr.DataArray | xr.Dataset, name: str) -> NDArray:
@@ -192,11 +201,13 @@ def _add(sums: NDArray, block: dict[str, NDArray], cell: NDArray[np.intp]) -> No
         "incidence": block.get("incidence_deg", np.zeros(cell.size)),
         "red": block["red"],
         "red_additive": block["red_sigma_additive"] ** 2,
+        "red_counting": block["red_sigma_additive"] ** 2 * block["red_per_count"],
         "red_common": block["red_sigma_common"] ** 2,
         "red_scaling": (block["red_relative"] * block["red"]) ** 2,
         "red_shared": block["red_sigma_shared"],
         "infrared": infrared,
         "infrared_additive": block["infrared_sigma_additive"] ** 2,
+        "infrared_counting": block["infrared_sigma_additive"] ** 2 * block["infrared_per_count"],
         "infrared_common": block["infrared_sigma_common"] ** 2,
         "infrared_scaling": (block["infrared_relative"] * infrared) ** 2,
         "infrared_shared": block["infrared_sigma_shared"],
@@ -230,9 +241,9 @@ def _means(total: dict[str, NDArray], incidence_known: bool) -> dict[str, NDArra
             f"{channel}_sigma_shared": shared,
             f"{channel}_sigma_additive": additive,
             f"{channel}_sigma_common": common,
-            f"{channel}_relative": np.divide(
-                scaling, np.abs(level), out=np.zeros_like(level), where=scaling > 0
-            ),
+            # of the cell's mean, weighted by what each shot adds to its variance
+            f"{channel}_per_count": _quotient(total[f"{channel}_counting"], total[f"{channel}_additive"]) / n,
+            f"{channel}_relative": _quotient(scaling, np.abs(level)),
         }
     holds_dropout = total["dropouts"] > 0
     cells["infrared_limit"] = np.where(holds_dropout, cells["infrared"], np.nan)
@@ -243,6 +254,11 @@ def _means(total: dict[str, NDArray], incidence_known: bool) -> dict[str, NDArra
     cells["n_shots"] = total["n"].astype(np.int64)
     cells["n_dropouts"] = total["dropouts"].astype(np.int64)
     return cells
+
+
+def _quotient(a: NDArray, b: NDArray) -> NDArray[np.float64]:
+    """a/b, 0 where a is not above 0."""
+    return np.asarray(np.divide(a, b, out=np.zeros_like(a), where=a > 0))
 
 
 def _described(grid: xr.Dataset, albedos: xr.Dataset) -> xr.Dataset:

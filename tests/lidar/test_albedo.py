@@ -1,10 +1,12 @@
+from dataclasses import replace
+
 import dask.array as da
 import numpy as np
 import pytest
 import xarray as xr
 
 import bandratio as br
-from bandratio.lidar.equation import albedo_per_energy, live_fraction
+from bandratio.lidar.equation import albedo_per_energy, live_fraction, sigma_of_likely_count
 from bandratio.lidar.returns import QUALITY
 
 COUNTS = {"constant": 0.02, "transmitted": 4e12, "energy_per_count": 1.0}  # K [m²], E_t [photons]
@@ -140,6 +142,7 @@ def test_dead_time_is_undone_and_its_noise_stated():
     truth = rate * gate / _mean_counts(1.0, 1e4, 0)
     assert float(albedos["red"].mean()) == pytest.approx(truth, rel=0.005)
     assert float(albedos["red_sigma_random"].mean()) == pytest.approx(float(albedos["red"].std()), rel=0.05)
+    np.testing.assert_allclose(albedos["red_live_fraction"], 1 - counts * dead / gate)
     assert live_fraction(2 * gate / dead, dead, gate) == 0
     blind = _calibration(part | {"least_live": 0.9}, part)
     assert (br.albedo_from_returns(returns, blind)["red_quality"] == QUALITY["saturated"]).all()
@@ -204,6 +207,45 @@ def test_arguments_for_the_flags_carry_each_error_once():
     )
     assert np.isfinite(given["infrared_limit"].values[1])
     np.testing.assert_array_equal(given["incidence_deg"], [0, 30])
+
+
+@pytest.mark.parametrize("infrared_counts", [3, 10, 30, 100])
+def test_few_infrared_counts_over_a_precise_red_raise_no_false_alarm(infrared_counts):
+    # ice-free ground on the edge of its list (ilmenite, half in shade), red a hundred times better measured: with
+    # sigma taken at the measured count the p-values were up to 240 times too small
+    n, level = 300_000, 0.5
+    red_counts = 100 * infrared_counts
+    rng = np.random.default_rng(infrared_counts)
+    red, infrared = rng.poisson(red_counts, n), rng.poisson(infrared_counts, n)
+    channels = [
+        br.LidarChannel(constant=1.0, transmitted=mean / (level * albedo), energy_per_count=1, limit=0.5)
+        for mean, albedo in ((red_counts, 0.0553), (infrared_counts, 0.0599))
+    ]
+    returns = br.as_returns(red, infrared, zero="dropout", range_m=np.ones(n), incidence_deg=np.full(n, 30.0))
+    channels = [
+        replace(channel, transmitted=channel.transmitted / np.cos(np.radians(30))) for channel in channels
+    ]
+    albedos = br.albedo_from_returns(returns, br.LidarCalibration(red=channels[0], infrared=channels[1]))
+    given = br.flag_arguments(albedos)
+    # at the laboratory's geometry, where the listed albedos hold and the ground lies on the hull's edge
+    given = {
+        name: given[name].to_numpy()
+        for name in ("red", "infrared", "sigma_red", "sigma_infrared", "infrared_limit")
+    }
+    p = br.ice_flags(**given, ice_free={"soil": (0.15981, 0.26907), "ilmenite": (0.0553, 0.0599)})["p_value"]
+    for nominal in (1e-2, 1e-3, 1e-4, 1e-5):
+        alarms = int((p <= nominal).sum())
+        assert alarms <= nominal * n + 4 * np.sqrt(nominal * n) + 1
+    at_count = given["sigma_infrared"] / albedos["infrared_per_count"]
+    assert (at_count[infrared > 0] > np.sqrt(infrared[infrared > 0] + 1)).all()
+
+
+def test_sigma_of_a_likely_count_solves_its_equation():
+    # Wilson's score: the mean μ from which the measured n lies z√μ below
+    for n, z in ((0.0, 5.0), (4.0, 3.0), (1000.0, 5.0)):
+        mean = sigma_of_likely_count(np.sqrt(n), 1.0, z) ** 2
+        assert mean - n == pytest.approx(z * np.sqrt(mean))
+    assert sigma_of_likely_count(0.3, 0.0) == 0.3
 
 
 def test_equation_by_hand():
