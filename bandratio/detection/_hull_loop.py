@@ -36,60 +36,47 @@ def fan_loop(outside: Floats, fan_angle: Floats, p_value: Floats) -> None:
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def facing_edge(red: float, first: int, last: int, knots: Floats) -> int:
-    """Return the facing edge that lies above all others at this red albedo, by bisection over the corners."""
-    low, high = first, last - 1
-    while low < high:
-        middle = (low + high) // 2
-        if red > knots[middle]:
-            low = middle + 1
-        else:
-            high = middle
-    return low
+def facing_edge(red: float, hull: int, knots: Floats, cells: Ints, cell_grid: Floats) -> int:
+    """Return the facing edge that lies above all others at this red albedo: by its cell, then corner by corner."""
+    # a cell to the left, so that rounding at a cell's end does no harm
+    cell = min(max((red - cell_grid[hull, 0]) * cell_grid[hull, 1] - 1, 0.0), cells.shape[1] - 1.0)
+    edge: int = cells[hull, int(cell)]
+    while red > knots[edge]:
+        edge += 1
+    return edge
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})
 def facing_loop(
-    red: Floats,
-    infrared: Floats,
-    var_red: Floats,
-    var_infrared: Floats,
-    covariance: Floats,
-    scaled_red: Floats,
-    scaled_infrared: Floats,
-    bins: Ints,
-    starts: Ints,
-    slopes: Floats,
-    intercepts: Floats,
-    knots: Floats,
-    outside: Floats,
-    p_value: Floats,
-) -> None:
+    red: Floats, infrared: Floats, var_red: Floats, var_infrared: Floats, covariance: Floats, scaled_red: Floats,
+    scaled_infrared: Floats, bins: Ints, starts: Ints, slopes: Floats, intercepts: Floats, knots: Floats, cells: Ints,
+    cell_grid: Floats, outside: Floats, p_value: Floats,
+) -> None:  # fmt: skip
     """Write how far outside the edges that face ice each point lies (0 inside), and its p-value.
 
     `scaled_*` are variances as a fraction squared, taken at the null point: (red, the hull's infrared there).
     """
     for i in range(red.size):
-        a, b = red[i], infrared[i]
-        first, last = starts[bins[i]], starts[bins[i] + 1]
-        vc = covariance[i]
-        if not (math.isfinite(a) and math.isfinite(b) and math.isfinite(var_red[i] + var_infrared[i] + vc)):
-            outside[i] = np.nan
-            p_value[i] = np.nan
+        a, b, va, vb, vc = red[i], infrared[i], var_red[i], var_infrared[i], covariance[i]
+        hull = bins[i]
+        first, last = starts[hull], starts[hull + 1]
+        told = a + b + va + vb + vc
+        if told - told != 0 or first == last:  # one of them is missing or infinite, or no edge faces ice
+            outside[i] = 0.0 if told - told == 0 else np.nan
+            p_value[i] = 1.0 if told - told == 0 else np.nan
             continue
-        outside[i] = 0.0
-        p_value[i] = 1.0
-        if first == last:
-            continue
-        nearest = facing_edge(a, first, last, knots)
+        nearest = facing_edge(a, hull, knots, cells, cell_grid)
         null_infrared = slopes[nearest] * a + intercepts[nearest]
-        if not b < null_infrared:
+        if b >= null_infrared:
+            outside[i] = 0.0
+            p_value[i] = 1.0
             continue
-        va = var_red[i] + scaled_red[i] * a * a
-        vb = var_infrared[i] + scaled_infrared[i] * null_infrared * null_infrared
+        va += scaled_red[i] * a * a
+        vb += scaled_infrared[i] * null_infrared * null_infrared
         # The distance in sigma, as a function of the edge's direction, is concave where it is positive: it rises
         # to one greatest value and falls. So walk from the nearest edge both ways; the slack passes rounding.
-        greatest = 0.0
+        # Distances are compared as fractions, squared/variance, without dividing.
+        squared, variance = 0.0, 1.0
         for step in (1, -1):
             edge = nearest if step == 1 else nearest - 1
             while first <= edge < last:
@@ -97,12 +84,14 @@ def facing_loop(
                 beyond = slope * a + intercepts[edge] - b
                 if beyond <= 0:
                     break
-                distance = beyond * beyond / (slope * slope * va - 2 * slope * vc + vb)
-                if distance > greatest:
-                    greatest = distance
-                elif distance < greatest * (1 - 1e-9):
+                here = slope * slope * va - 2 * slope * vc + vb
+                mine, others = beyond * beyond * variance, squared * here
+                if mine > others:
+                    squared, variance = beyond * beyond, here
+                elif mine < others * (1 - 1e-9):
                     break
                 edge += step
+        greatest = squared / variance
         low, high = slopes[first], slopes[last - 1]
         across = math.sqrt(max(va * vb - vc * vc, 0.0)) * (high - low)
         along = low * high * va - (low + high) * vc + vb

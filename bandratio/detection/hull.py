@@ -38,6 +38,8 @@ INTERVALS = 64
 #: Width of the bins of incidence [degree], and the steepest one a hull is built for.
 BIN_DEG = 2.5
 STEEPEST_DEG = 80.0
+#: Cells of red by which the facing edge above a point is found.
+CELLS = 256
 #: Points nearer to each other than this are one point: far below any measurement, far above rounding.
 _ONE_POINT = 1e-9
 
@@ -258,6 +260,15 @@ class PackedHulls(NamedTuple):
     slopes: NDArray[np.float64]
     intercepts: NDArray[np.float64]
     knots: NDArray[np.float64]
+    cells: NDArray[np.int64]  # (hull, CELLS): the facing edge above the left end of each cell of red
+    cell_grid: NDArray[np.float64]  # (hull, 2): red where the cells begin, cells in a unit of red
+
+
+def _cell_grid(knots: NDArray[np.float64]) -> tuple[float, float]:
+    """Where the cells that find a facing edge at once begin, and how many there are in a unit of red."""
+    if len(knots) < 2:
+        return 0.0, 0.0
+    return float(knots[0]), CELLS / max(float(knots[-1] - knots[0]), 1e-12)
 
 
 def _starts(lengths: Iterable[int]) -> NDArray[np.int64]:
@@ -283,6 +294,9 @@ class HullsByIncidence:
     def packed(self) -> PackedHulls:
         """The edges of all hulls, one after another."""
         chains = [hull.chains() for hull in self.hulls]
+        facing_starts = _starts(len(hull.slopes) for hull in self.hulls)
+        grid = np.array([_cell_grid(hull.knots) for hull in self.hulls])
+        left_ends = grid[:, :1] + np.arange(CELLS) / np.maximum(grid[:, 1:], 1e-300)
         return PackedHulls(
             starts=_starts(len(hull.offsets) for hull in self.hulls),
             normals=np.concatenate([hull.normals for hull in self.hulls]),
@@ -292,7 +306,14 @@ class HullsByIncidence:
             lower_chain=np.concatenate([lower for lower, _ in chains]),
             upper_starts=_starts(len(upper) for _, upper in chains),
             upper_chain=np.concatenate([upper for _, upper in chains]),
-            facing_starts=_starts(len(hull.slopes) for hull in self.hulls),
+            facing_starts=facing_starts,
+            cells=np.array(
+                [
+                    first + np.searchsorted(hull.knots, ends)
+                    for hull, first, ends in zip(self.hulls, facing_starts, left_ends, strict=False)
+                ]
+            ),
+            cell_grid=grid,
             slopes=np.concatenate([hull.slopes for hull in self.hulls]),
             intercepts=np.concatenate([hull.intercepts for hull in self.hulls]),
             # one knot fewer than edges: filled up, so that one index serves both

@@ -233,7 +233,7 @@ def hull_p_values(
         block = points.part(first, last)
         facing_loop(
             *block.measured(), hulls.bins(block.incidence_deg), packed.facing_starts, packed.slopes,
-            packed.intercepts, packed.knots, outside[first:last], p[first:last],
+            packed.intercepts, packed.knots, packed.cells, packed.cell_grid, outside[first:last], p[first:last],
         )  # fmt: skip
 
     over_blocks(work, len(points), threads)

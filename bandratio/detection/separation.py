@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -54,3 +55,9 @@ class Separation:
             for name, value in vars(self).items()
             if name != "curve"
         }
+
+    @classmethod
+    def from_description(cls, told: Mapping[str, Any]) -> Separation:
+        """Make the separation that :meth:`describe` told of, with an empty curve."""
+        values = {name: tuple(value) if isinstance(value, list) else value for name, value in told.items()}
+        return cls(**values, curve=np.empty((2, 0)))

@@ -196,14 +196,43 @@ class Threshold:
             told["separation"] = self.separation.describe()
         return told
 
+    def check_direction(self, direction: Literal["above", "below"]) -> None:
+        """Refuse to be used on the side where the unwanted lie, where that is known from labelled spectra.
+
+        Parameters
+        ----------
+        direction : {"above", "below"}
+            Where values count as wanted.
+
+        Raises
+        ------
+        ValueError
+            If the wanted lay on the other side.
+        """
+        if self.separation is not None and self.separation.direction != direction:
+            raise ValueError(
+                f"the {self.origin} threshold of {self.parameter} was made for wanted values "
+                f"{self.separation.direction} it, and values {direction} it are asked for; make one with wanted and "
+                "unwanted exchanged, or give the number alone"
+            )
+
     @classmethod
     def from_description(cls, told: Mapping[str, Any]) -> Threshold:
-        """Make the threshold that :meth:`describe` told of, without what it rested on."""
+        """Make the threshold that :meth:`describe` told of; its separation is without the curve."""
         known = ("value", "sigma", "origin", "parameter", "shoulder", "quantity")
-        missing = {"value"} - set(told)
-        if missing:
-            raise ValueError(f"a threshold's description needs {', '.join(missing)}, got {', '.join(told)}")
-        return cls(**{name: told[name] for name in known if name in told})
+        if "value" not in told:
+            raise ValueError(f"a threshold's description needs value, got {', '.join(told)}")
+        rests_on = told.get("separation")
+        return cls(
+            **{name: told[name] for name in known if name in told},
+            separation=None if rests_on is None else _separation_of(rests_on),
+        )
+
+
+def _separation_of(told: Mapping[str, Any]) -> Separation:
+    from .separation import Separation
+
+    return Separation.from_description(told)
 
 
 def as_threshold(value: float | Threshold, parameter: str = "") -> Threshold:

@@ -65,7 +65,7 @@ def read_thresholds(path: str | Path, name: str | None = None) -> dict[str, Thre
     Returns
     -------
     dict of str to Threshold
-        With value, sigma, origin, parameter, shoulder and quantity, and without the curve that they rest on.
+        As they were written, but for the curve of their separation.
 
     Raises
     ------

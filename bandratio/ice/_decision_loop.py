@@ -39,8 +39,8 @@ def ice_bounds(
 def bounds_loop(
     red: Floats, infrared: Floats, var_red: Floats, var_infrared: Floats, covariance: Floats, scaled_red: Floats,
     scaled_infrared: Floats, dropout: Bools, bins: Ints, z: float, starts: Ints, normals: Floats, offsets: Floats,
-    facing_starts: Ints, slopes: Floats, intercepts: Floats, knots: Floats, ice_starts: Ints, raising: Floats,
-    lowering: Floats, lower: Floats, upper: Floats,
+    facing_starts: Ints, slopes: Floats, intercepts: Floats, knots: Floats, cells: Ints, cell_grid: Floats,
+    ice_starts: Ints, raising: Floats, lowering: Floats, lower: Floats, upper: Floats,
 ) -> None:  # fmt: skip
     """Write the bounds of the areal fraction of ice, each one-sided at z sigma.
 
@@ -66,7 +66,7 @@ def bounds_loop(
         highest_red = true_at_most(a, var_red[i], scaled_red[i], z)
         highest_infrared = true_at_most(b, var_infrared[i], scaled_infrared[i], z)
         if facing_starts[hull + 1] > facing_starts[hull]:
-            edge = facing_edge(a, facing_starts[hull], facing_starts[hull + 1], knots)
+            edge = facing_edge(a, hull, knots, cells, cell_grid)
             highest_infrared = min(highest_infrared, max(b, slopes[edge] * a + intercepts[edge]))
         va = var_red[i] + scaled_red[i] * a * a
         va_high = var_red[i] + scaled_red[i] * highest_red * highest_red

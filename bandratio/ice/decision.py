@@ -132,7 +132,7 @@ class Decision:
         bounds_loop(
             *points.measured(), points.dropout, self.hulls.bins(points.incidence_deg), self._z[0], edges.starts,
             edges.normals, edges.offsets, hulls.facing_starts, hulls.slopes, hulls.intercepts, hulls.knots,
-            edges.ice_starts, edges.raising, edges.lowering, lower, upper,
+            hulls.cells, hulls.cell_grid, edges.ice_starts, edges.raising, edges.lowering, lower, upper,
         )  # fmt: skip
         return lower, upper
 
