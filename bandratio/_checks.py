@@ -8,9 +8,16 @@ from collections.abc import Iterable
 __all__ = ["listed", "non_negative", "one_of", "open_fraction", "positive", "suggestion"]
 
 
+#: More values than this are not spelled out in a message.
+_LISTED = 12
+
+
 def listed(values: Iterable[object], unit: str = "") -> str:
-    """Comma-separated values for a message, numbers in their shortest form, e.g. ``480, 600 nm``."""
+    """Comma-separated values for a message, numbers in their shortest form, e.g. ``480, 600 nm``; at most a dozen."""
     texts = [f"{value:g}" if isinstance(value, float) else str(value) for value in values]
+    if len(texts) > _LISTED:
+        unit = f"{unit} ({len(texts)} in all)".strip()
+        texts = [*texts[: _LISTED - 2], "…", texts[-1]]
     return ", ".join(texts) + (f" {unit}" if unit and texts else "") if texts else "none"
 
 

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from ._checks import listed
+from ._checks import listed, non_negative
 
 __all__ = [
     "TOLERANCE_NM",
@@ -79,8 +79,7 @@ def nearest_band(centres: Sequence[float] | NDArray, wanted: float, tolerance: f
     >>> nearest_band([480, 601.2, 700, 830], 600)
     1
     """
-    if not tolerance >= 0:
-        raise ValueError(f"tolerance must be zero or above, got {tolerance} nm")
+    non_negative("tolerance", tolerance, "nm")
     array = np.asarray(centres, dtype=float)
     distance = np.abs(array - wanted)
     candidates = np.flatnonzero(distance == np.nanmin(distance)) if array.size else np.array([], dtype=int)
@@ -114,7 +113,12 @@ def nearest_bands(
 
 
 def values_per_band(
-    name: str, value: Any, centres: ArrayLike, tolerance: float = TOLERANCE_NM
+    name: str,
+    value: Any,
+    centres: ArrayLike,
+    tolerance: float = TOLERANCE_NM,
+    *,
+    needed: NDArray[np.bool_] | None = None,
 ) -> NDArray[np.float64]:
     """One value for each band, from a number for all, ``{nm: value}`` or a list as long as the bands.
 
@@ -128,6 +132,8 @@ def values_per_band(
         Band centres [nm].
     tolerance : float
         Largest distance between a band's centre and the wavelength of a value [nm].
+    needed : ndarray of bool, shape (band,), optional
+        Bands that must have a value; the others are NaN where they have none. None: all.
 
     Returns
     -------
@@ -136,7 +142,7 @@ def values_per_band(
     Raises
     ------
     ValueError
-        If a list has another length, or a band has no value near enough.
+        If a list has another length, or a needed band has no value near enough.
 
     Examples
     --------
@@ -147,10 +153,12 @@ def values_per_band(
     if isinstance(value, Mapping):
         given = np.array(list(value), dtype=float)
         numbers = list(value.values())
+        found = np.full(bands.size, np.nan)
         try:
-            return np.array(
-                [numbers[nearest_band(given, centre, tolerance)] for centre in bands], dtype=float
-            )
+            for band, centre in enumerate(bands):
+                if needed is None or needed[band] or np.abs(given - centre).min() <= tolerance:
+                    found[band] = numbers[nearest_band(given, centre, tolerance)]
+            return found
         except BandNotFoundError:
             raise BandNotFoundError(
                 f"{name} has values at {listed(given.tolist(), 'nm')}, but the cube's bands are "

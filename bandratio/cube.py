@@ -9,7 +9,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import ArrayLike
 
-from ._checks import listed, suggestion
+from ._checks import listed
 from .bands import TOLERANCE_NM, nearest_band, wavelength_array
 
 __all__ = ["QUANTITIES", "as_cube", "band_indices", "is_lazy", "quantity_of", "require_cube"]
@@ -87,11 +87,12 @@ def as_cube(
         )
     cube = cube.assign_coords(wavelength=("wavelength", centres, {**_WAVELENGTH}))
     if fwhm is not None:
-        widths = wavelength_like(fwhm, centres.size)
+        widths = _band_widths(fwhm, centres.size)
         cube = cube.assign_coords(fwhm=("wavelength", widths, {**_FWHM}))
     if quantity is not None:
         if quantity not in QUANTITIES:
-            raise ValueError(f"unknown quantity {quantity!r}{suggestion(quantity, QUANTITIES)}")
+            known = "; ".join(f"{word}: {readable}" for word, (_, readable) in QUANTITIES.items())
+            raise ValueError(f"unknown quantity {quantity!r}; give one of these words: {known}")
         cube = cube.assign_coords(quantity=quantity)
     return cube.transpose("wavelength", ...).rename(cube.name or "reflectance")
 
@@ -124,7 +125,7 @@ def _labelled(array: Any) -> xr.DataArray:
     return xr.DataArray(data, dims=names[data.ndim])
 
 
-def wavelength_like(values: ArrayLike, bands: int) -> np.ndarray:
+def _band_widths(values: ArrayLike, bands: int) -> np.ndarray:
     """Band widths as an array of float [nm], checked; one number serves for all bands."""
     try:
         widths = np.asarray(values, dtype=float)

@@ -56,7 +56,7 @@ def check_cube(cube: xr.DataArray, *, full: bool | None = None) -> Findings:
     Examples
     --------
     >>> import bandratio as br
-    >>> br.check_cube(br.as_cube([[12.0, 25.0], [14.0, 31.0]], [480, 600]))
+    >>> br.check_cube(br.as_cube([[12.5, 25.0], [14.0, 31.0]], [480, 600]))
     ['the values look like percent (100% of them are above 1, the largest is 31); divide by 100']
     """
     if not isinstance(cube, xr.DataArray):
@@ -77,15 +77,19 @@ def check_cube(cube: xr.DataArray, *, full: bool | None = None) -> Findings:
     tally = _Tally(bands)
     for block in _blocks(cube, sampled):
         tally.add(block.reshape(bands, -1))
-    names = [f"{w:g} nm" for w in cube["wavelength"].values] if "wavelength" in cube.coords else [
-        f"number {i + 1}" for i in range(bands)
-    ]  # fmt: skip
-    sentences += _of_values(tally, names)
+    of_values = list(_of_values(tally, _band_names(cube)))
     coverage = f"all {total:,} pixels were read"
     if sampled:
         coverage = f"a sample of {tally.pixels:,} of {total:,} pixels was read; full=True reads all"
-        sentences = [f"{sentence} (counted in a sample of {tally.pixels:,} pixels)" for sentence in sentences]
-    return Findings(sentences, coverage)
+        of_values = [f"{sentence} (counted in a sample of {tally.pixels:,} pixels)" for sentence in of_values]
+    return Findings([*sentences, *of_values], coverage)
+
+
+def _band_names(cube: xr.DataArray) -> list[str]:
+    if "wavelength" not in cube.coords:
+        return [f"number {i + 1}" for i in range(cube.sizes["wavelength"])]
+    centres = np.asarray(cube["wavelength"].values, dtype=float)
+    return [f"{centre:g} {'µm' if (centres < 30).all() else 'nm'}" for centre in centres]
 
 
 def _blocks(cube: xr.DataArray, sampled: bool) -> Iterator[NDArray]:
@@ -113,6 +117,7 @@ class _Tally:
     bands: int
     pixels: int = 0
     part_missing: int = 0
+    all_zero: int = 0
     all_whole: bool = True
     missing: NDArray = field(init=False)
     infinite: NDArray = field(init=False)
@@ -136,6 +141,7 @@ class _Tally:
         some = absent.any(axis=0)
         self.part_missing += int((some & ~absent.all(axis=0)).sum())
         self.infinite += (~finite & ~absent).sum(axis=1)
+        self.all_zero += int((values == 0).all(axis=0).sum())
         for j, row in enumerate(values):
             good = row[finite[j]]
             if good.size == 0:
@@ -180,7 +186,7 @@ def _of_values(tally: _Tally, names: list[str]) -> Iterator[str]:
         return
     highest = float(tally.most.max())
     unscaled = tally.above_one.sum() > everything / 2
-    if unscaled and tally.all_whole and highest > 200:
+    if unscaled and tally.all_whole:
         yield (
             f"the values look like scaled integers that were never unscaled (whole numbers up to {highest:g}); give "
             "scale=…, for example scale=0.0001"
@@ -191,6 +197,11 @@ def _of_values(tally: _Tally, names: list[str]) -> Iterator[str]:
             f"the values look like percent ({share}); divide by 100"
             if highest <= 200
             else f"the values are no fractions ({share}); check the scale, and give scale=…"
+        )
+    if tally.all_zero >= max(2, 1e-4 * tally.pixels):
+        yield (
+            f"{_pixels(tally.all_zero)} are exactly zero in every band, as fill around an image is; give nodata=0, or "
+            "make them NaN"
         )
     for j, name in enumerate(names):
         if filled[j] == 0:

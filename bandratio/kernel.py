@@ -298,6 +298,7 @@ def _short_ratio(  # type: ignore[no-untyped-def]
     V0, V1, V2 = variance[j0], variance[j1], variance[j2]
     s_0, s_1, s_2 = scale * n_0, scale * n_1, scale * n_2
     a_p, a_0 = along * d0, along * scale * n0
+    largest = np.finfo(value.dtype).max
     for i in range(value.size):
         upper = n0 + n_0 * float(R0[i]) + n_1 * float(R1[i]) + n_2 * float(R2[i])
         lower = d0 + d_0 * float(R0[i]) + d_1 * float(R1[i]) + d_2 * float(R2[i])
@@ -306,8 +307,10 @@ def _short_ratio(  # type: ignore[no-untyped-def]
         g0, g1, g2 = s_0 - p * d_0, s_1 - p * d_1, s_2 - p * d_2
         common = a_p * p - a_0
         total = g0 * g0 * V0[i] + g1 * g1 * V1[i] + g2 * g2 * V2[i] + common * common
-        value[i] = p
-        sigma[i] = np.sqrt(sigma.dtype.type(total)) * sigma.dtype.type(inverse)
+        s = np.sqrt(sigma.dtype.type(total)) * sigma.dtype.type(inverse)
+        # what does not fit the type of the output is no value either (a nodata value that was never masked)
+        value[i] = p if abs(p) <= largest else np.nan
+        sigma[i] = s if s <= largest else np.nan
 
 
 @njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})
@@ -331,10 +334,12 @@ def _any_ratio(  # type: ignore[no-untyped-def]
             x = float(row[i])
             upper[i] += nj * x
             inverse[i] += dj * x
+    largest = np.finfo(out.dtype).max
     for i in range(m):
         lower = inverse[i]
         inverse[i] = 1.0 / lower if lower > 0.0 else np.nan
-        p[i] = scale * upper[i] * inverse[i]
+        x = scale * upper[i] * inverse[i]
+        p[i] = x if abs(x) <= largest else np.nan
         value[i] = p[i]
     if planes == 1:
         return
@@ -358,8 +363,11 @@ def _any_ratio(  # type: ignore[no-untyped-def]
             common = gain[i] * (p[i] * d0 - scale * n0) * inverse[i]
             sum_random[i] += common * common
     for i in range(m):
-        sigma[i] = np.sqrt(sum_random[i] + sum_shared[i])
+        s = np.sqrt(sum_random[i] + sum_shared[i])
+        sigma[i] = s if s <= largest else np.nan
     if planes == 4:
         for i in range(m):
-            sigma_random[i] = np.sqrt(sum_random[i])
-            sigma_shared[i] = np.sqrt(sum_shared[i])
+            s = np.sqrt(sum_random[i])
+            sigma_random[i] = s if s <= largest else np.nan
+            s = np.sqrt(sum_shared[i])
+            sigma_shared[i] = s if s <= largest else np.nan

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from ._checks import listed
 from .bands import TOLERANCE_NM
-from .catalogue import resolve, shoulder_of
+from .catalogue import resolve
 from .cube import is_lazy, require_cube
 from .noise import BandNoise, Noise
 from .ratio import BandRatio
@@ -98,15 +98,23 @@ def parameters(
     planes = _planes(cube, noise, list(ratios.values()), centres, tolerance, parts)
     dims = tuple(dim for dim in cube.dims if dim != "wavelength")
     coords = {name: c for name, c in cube.coords.items() if "wavelength" not in c.dims}
+    # where the map projection stands under another name than spatial_ref, every map must say so
+    mapping = {key: cube.encoding[key] for key in ("grid_mapping",) if key in cube.encoding}
     variables = {}
     for k, (name, ratio) in enumerate(ratios.items()):
         for part, suffix in enumerate(suffixes):
             variables[name + suffix] = xr.Variable(
-                dims, planes[k, part], map_attributes(ratio, suffix, suffixes, centres, tolerance)
+                dims,
+                planes[k, part],
+                map_attributes(ratio, suffix, suffixes, centres, tolerance),
+                mapping,
             )
     attributes: dict[str, Any] = {"Conventions": "CF-1.11", "bandratio_version": _version()}
-    attributes["wavelengths"] = listed(centres.tolist(), "nm")
+    attributes["wavelengths"] = ", ".join(f"{centre:g}" for centre in centres) + " nm"
     attributes["noise"] = noise.describe() if noise is not None else "none given"
+    carried = [name for name in ("pixel_gain", "brightness_factor") if name in cube.coords]
+    if noise is not None and carried:
+        attributes["noise_of_the_cube"] = f"{' and '.join(carried)} of the cube enter the sigmas"
     attributes["left_out"] = "; ".join(f"{name}: {reason}" for name, reason in left_out.items())
     if "normalisation" in cube.attrs:
         attributes["normalisation"] = cube.attrs["normalisation"]
@@ -117,21 +125,11 @@ def map_attributes(
     ratio: BandRatio, suffix: str, suffixes: Sequence[str], centres: NDArray, tolerance: float
 ) -> dict[str, Any]:
     """Attributes of one variable of the maps."""
-    name = ratio.name
-    readable = ratio.long_name or ratio.definition
-    attributes: dict[str, Any] = {"long_name": PARTS[suffix] + readable, "units": ratio.units}
     if suffix:
-        return attributes
-    attributes["definition"] = ratio.definition
-    if ratio.source:
-        attributes["source"] = ratio.source
-    n, d = ratio.weights_for(centres, tolerance)
-    attributes["bands"] = listed(centres[(n != 0) | (d != 0)].tolist(), "nm")
-    shoulder = shoulder_of(ratio)
-    if shoulder is not None:
-        attributes["shoulder"] = shoulder
+        return {"long_name": PARTS[suffix] + ratio.readable, "units": ratio.units}
+    attributes: dict[str, Any] = dict(ratio.describe(centres, tolerance))
     if len(suffixes) > 1:
-        attributes["ancillary_variables"] = " ".join(name + other for other in suffixes[1:])
+        attributes["ancillary_variables"] = " ".join(ratio.name + other for other in suffixes[1:])
     return attributes
 
 
@@ -155,7 +153,9 @@ def _planes(
     table = RatioTable.build(ratios, centres, tolerance)
     noises, per_pixel = None, {}
     if noise is not None:
-        band = noise.for_cube(cube, tolerance)
+        used = np.zeros(centres.size, dtype=bool)
+        used[table.band] = True
+        band = noise.for_cube(cube, tolerance, used=used)
         noises = _noise_table(band, NoiseTable)
         if noise.random_is_map:
             per_pixel["random_map"] = _like_the_cube(band.random, cube)

@@ -7,13 +7,14 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Self
 
 import numpy as np
 import xarray as xr
 from numpy.typing import ArrayLike
 
+from ._checks import listed
 from .bands import TOLERANCE_NM, nearest_bands
 
 if TYPE_CHECKING:
@@ -128,6 +129,8 @@ class BandRatio:
             numbers["denominator_offset"] = 1.0
         if not numerator and not denominator:
             raise ValueError("a band ratio needs weights: give numerator={wavelength in nm: weight}")
+        if not numerator and numbers["numerator_offset"] == 0:
+            raise ValueError("the numerator is zero, and every value would be; give it weights or an offset")
         if not denominator and numbers["denominator_offset"] == 0:
             raise ValueError(
                 "the denominator is zero: give it weights or an offset, or leave it out for a denominator of 1"
@@ -185,6 +188,27 @@ class BandRatio:
             parts.append(f"/({lower})" if " " in lower else f"/{lower}")
         return "".join(parts)
 
+    @property
+    def readable(self) -> str:
+        """The long name, or the formula where there is none."""
+        return self.long_name or self.definition
+
+    def describe(self, centres: ArrayLike, tolerance: float = TOLERANCE_NM) -> dict[str, str | float]:
+        """Attributes of the value at the given band centres [nm]: names, unit, formula, bands and source."""
+        actual = self.at_centres(centres, tolerance)
+        told: dict[str, str | float] = {
+            "long_name": self.readable,
+            "units": self.units,
+            "definition": actual.definition,
+            "bands": listed(actual.wavelengths, "nm"),
+        }
+        if self.source:
+            told["source"] = self.source
+        shoulder = getattr(self, "shoulder", None)
+        if shoulder is not None:
+            told["shoulder"] = shoulder
+        return told
+
     def weights_for(
         self, centres: ArrayLike, tolerance: float = TOLERANCE_NM
     ) -> tuple[np.ndarray, np.ndarray]:
@@ -215,6 +239,13 @@ class BandRatio:
             d[band] = self.denominator.get(wavelength, 0.0)
         return n, d
 
+    def at_centres(self, centres: ArrayLike, tolerance: float = TOLERANCE_NM) -> Self:
+        """The same ratio with its weights at the actual band centres [nm], under the same name."""
+        n, d = self.weights_for(centres, tolerance)
+        actual = np.asarray(centres, dtype=float)
+        numerator, denominator = (dict(zip(actual[w != 0], w[w != 0], strict=True)) for w in (n, d))
+        return replace(self, numerator=numerator, denominator=denominator)
+
     def value(self, cube: xr.DataArray, *, tolerance: float = TOLERANCE_NM) -> xr.DataArray:
         """Value of the ratio at every pixel.
 
@@ -230,7 +261,8 @@ class BandRatio:
         DataArray of float64, dimensions of `cube` without `wavelength`
             NaN where a band is missing or the denominator is not positive.
         """
-        return self._terms(cube, tolerance)[3].rename(self.name)
+        p = self._terms(cube, tolerance)[3].rename(self.name)
+        return p.assign_attrs(self.describe(cube["wavelength"].values, tolerance))
 
     def gradient(self, cube: xr.DataArray, *, tolerance: float = TOLERANCE_NM) -> xr.DataArray:
         """Exact derivative by each band's reflectance, zero for bands that are not used.
@@ -243,7 +275,8 @@ class BandRatio:
         n, d, lower, p = self._terms(cube, tolerance)
         slope = (self.scale * n - p * d) / lower
         used = (n != 0) | (d != 0)
-        return slope.where(used, 0.0).transpose(*cube.dims).rename(f"{self.name}_gradient")
+        gradient = slope.where(used, 0.0).transpose(*cube.dims).rename(f"{self.name}_gradient")
+        return gradient.assign_attrs(long_name=f"gradient of {self.readable} by reflectance")
 
     def variances(
         self, cube: xr.DataArray, noise: Noise, *, tolerance: float = TOLERANCE_NM
@@ -264,7 +297,7 @@ class BandRatio:
         g = self.gradient(cube, tolerance=tolerance)
         R = cube.astype(float)
         used = np.any(self.weights_for(cube["wavelength"].values, tolerance), axis=0)
-        band = noise.for_cube(cube, tolerance)
+        band = noise.for_cube(cube, tolerance, used=used)
 
         g2 = (g**2).isel(wavelength=used)
         random = (g2 * band.random_variance(R).isel(wavelength=used)).sum("wavelength", skipna=False)
@@ -308,7 +341,7 @@ class BandRatio:
             raise ValueError("give either noise=… or covariance=…, one of the two")
         if noise is not None:
             random, shared = self.variances(cube, noise, tolerance=tolerance)
-            return ((random + shared) ** 0.5).rename(f"{self.name}_sigma")
+            return self._sigma_of(random + shared)
         matrix = np.asarray(covariance, dtype=float)
         bands = cube.sizes["wavelength"]
         if matrix.shape != (bands, bands):
@@ -325,16 +358,20 @@ class BandRatio:
         C = xr.DataArray(matrix, dims=("wavelength", "wavelength_2"))
         g2 = g.drop_vars("wavelength").rename(wavelength="wavelength_2")
         variance = xr.dot(g.drop_vars("wavelength"), C, g2, dim=("wavelength", "wavelength_2"))
-        sigma: xr.DataArray = variance.clip(min=0) ** 0.5
-        return sigma.rename(f"{self.name}_sigma")
+        return self._sigma_of(variance.clip(min=0))
+
+    def _sigma_of(self, variance: xr.DataArray) -> xr.DataArray:
+        sigma: xr.DataArray = (variance**0.5).rename(f"{self.name}_sigma")
+        return sigma.assign_attrs(long_name=f"standard uncertainty of {self.readable}", units=self.units)
 
     def _terms(
         self, cube: xr.DataArray, tolerance: float
     ) -> tuple[xr.DataArray, xr.DataArray, xr.DataArray, xr.DataArray]:
         if not isinstance(cube, xr.DataArray) or "wavelength" not in cube.coords:
+            came = f"one with {list(cube.coords)}" if isinstance(cube, xr.DataArray) else type(cube).__name__
             raise TypeError(
                 "a cube must be a DataArray with a wavelength coordinate in nm, as br.as_cube makes one; "
-                f"got {type(cube).__name__}"
+                f"got {came}"
             )
         at = {"wavelength": cube["wavelength"].values}
         n, d = (xr.DataArray(w, at, ("wavelength",)) for w in self.weights_for(at["wavelength"], tolerance))

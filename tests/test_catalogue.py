@@ -8,6 +8,7 @@ import pytest
 
 import bandratio as br
 from bandratio import catalogue
+from bandratio.catalogue.definitions import DEFINITIONS
 
 from .reference.soil_62231 import REFLECTANCE
 
@@ -87,6 +88,24 @@ def test_named_ratio_is_what_the_map_computes():
         assert float(value) == pytest.approx(float(ratio.value(soil(wavelengths))), rel=1e-12)
 
 
+def test_the_shoulder_goes_with_the_depth_whatever_it_is_called():
+    maps = br.parameters(
+        soil([480, 600, 700, 830]), names={"depth": br.named_ratio("mafic_depth", [700, 830])}
+    )
+    assert maps.depth.attrs["shoulder"] == 700
+    # a wide tolerance lets the 700 nm band serve as the 750 nm shoulder: both attributes tell the same
+    wide = br.parameters(soil([480, 600, 700, 830]), tolerance=60).mafic_depth.attrs
+    assert f"shoulder at {wide['shoulder']:g} nm" in wide["long_name"]
+
+
+def test_a_ratio_tells_the_centres_that_it_was_computed_with():
+    maps = br.parameters(br.as_cube([0.2, 0.25], [749.3, 951.0]), names=[br.BandRatio({950: 1}, {750: 1})])
+    assert maps.r950_r750.attrs["definition"] == "R951/R749.3"
+    value = br.BandRatio({950: 1}, {750: 1}, units="1").value(br.as_cube([0.2, 0.25], [749.3, 951.0]))
+    assert value.attrs["definition"] == "R951/R749.3"
+    assert value.attrs["units"] == "1"
+
+
 def test_own_ratios_beside_the_named_ones():
     own = br.BandRatio({830: 1}, {480: 1})
     maps = br.parameters(soil(FIVE), names=["red_slope", own, replace(own, name="mine")])
@@ -112,7 +131,7 @@ def test_a_parameter_added_in_ten_lines():
         with pytest.raises(ValueError, match="the name 'blue_depth' is taken"):
             catalogue.defines("blue_depth")
     finally:
-        del catalogue._DEFINITIONS["blue_depth"]
+        del DEFINITIONS["blue_depth"]
 
 
 @pytest.mark.parametrize(

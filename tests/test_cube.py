@@ -98,7 +98,11 @@ def test_a_lazy_array_stays_lazy():
         ((np.zeros(2), [600, 700], [10, 20, 30]), {}, "fwhm must hold one width in nm for each of 2 bands"),
         ((np.zeros(2), [600, 700], [10, -20]), {}, "fwhm must be positive"),
         ((np.zeros(2), [600, 700], "wide"), {}, "fwhm must be numbers"),
-        ((np.zeros(2), [600, 700]), {"quantity": "radiance factor"}, "did you mean radiance_factor"),
+        (
+            (np.zeros(2), [600, 700]),
+            {"quantity": "radiance factor"},
+            "unknown quantity 'radiance factor'; give one of these words: reflectance_factor",
+        ),
         ((np.zeros((2, 1, 1, 1)), [600, 700]), {}, r"shape \(2, 1, 1, 1\) is no cube"),
         ((0.5, [600]), {}, r"shape \(\) is no cube"),
         ((np.zeros(2, complex), [600, 700]), {}, "must be real numbers, got complex128"),
@@ -180,6 +184,9 @@ def saturate(values):
         (np.rint(good() * 10000), (480, 600, 700), "scaled integers that were never unscaled"),
         (np.rint(good() * 10000).astype("i2"), (480, 600, 700), "scaled integers that were never unscaled"),
         (good() * 1000.5, (480, 600, 700), "the values are no fractions"),
+        (np.rint(good() * 250).astype("u1"), (480, 600, 700), "scaled integers that were never unscaled"),
+        (with_change(lambda v: v.__setitem__((slice(None), slice(20)), 0)), (480, 600, 700),
+         "1,000 pixels are exactly zero in every band, as fill around an image is; give nodata=0"),
         (with_change(lambda v: v[1].__setitem__((0, slice(3)), -0.01)), (480, 600, 700),
          "band 600 nm has 3 pixels with a negative value, the lowest -0.01"),
         (with_change(lambda v: v[2].__setitem__((0, 0), 1.2)), (480, 600, 700),
@@ -222,6 +229,8 @@ def test_a_large_lazy_cube_is_sampled_and_says_so():
     assert "a sample of 4,000,000 of 100,000,000 pixels" in found.coverage
     assert found
     assert all("in a sample of 4,000,000 pixels" in finding for finding in found)
+    unsorted = br.check_cube(cube.assign_coords(wavelength=[700.0, 600.0]))
+    assert not any("sample" in finding for finding in unsorted if "ascending" in finding)
 
 
 @pytest.mark.parametrize(

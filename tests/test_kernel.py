@@ -136,3 +136,20 @@ def test_denominators_that_are_not_positive_give_nan(lower):
         assert np.isnan(variable[0]) or lower == np.inf
         assert np.isfinite(variable[1])
         assert not np.isinf(variable).any()
+
+
+@pytest.mark.parametrize("parts", [False, True])
+def test_what_does_not_fit_the_type_of_the_output_is_nan(parts):
+    """A nodata value that was never masked must not become infinite."""
+    cube = br.as_cube(np.array([[0.2, 0.2], [np.finfo("f4").max, 0.3]], "f4"), [600, 700])
+    noise = br.Noise(random=0.01, relative=0.1, common_gain=0.1)
+    names = [
+        "red_slope",
+        br.BandRatio({700: 1}, {600: 1}),
+        br.BandRatio({700: 5}, name="five"),
+        "reflectance_700",
+    ]
+    maps = br.parameters(cube, noise, names, parts=parts)
+    for name, variable in maps.data_vars.items():
+        assert not np.isinf(variable).any(), name
+        assert np.isfinite(variable[1]), name

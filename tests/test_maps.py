@@ -6,6 +6,7 @@ import sys
 import dask.array as da
 import numpy as np
 import pytest
+import rioxarray  # noqa: F401 (its accessor is used)
 import xarray as xr
 
 import bandratio as br
@@ -187,3 +188,18 @@ def test_a_coordinate_may_not_be_called_like_a_map(name):
         with pytest.raises(ValueError, match=f"'{name}' is the name of one of the cube's coordinates; give"):
             br.parameters(clashing, br.Noise(random=0.1))
     assert "red_slope" in br.parameters(cube.assign_coords(red_slope_sigma=1.0))
+
+
+def test_a_map_projection_under_another_name_stays_with_every_map():
+    cube = br.as_cube(np.full((2, 3, 4), 0.2, "f4"), [600, 700]).rio.write_crs(
+        "+proj=eqc +R=1100000 +units=m", grid_mapping_name="body"
+    )
+    maps = br.parameters(cube, br.Noise(random=0.001))
+    assert all(variable.encoding["grid_mapping"] == "body" for variable in maps.data_vars.values())
+    assert maps.red_slope.rio.crs == cube.rio.crs
+
+
+def test_long_lists_of_bands_are_told_in_short():
+    cube = br.as_cube(np.full(100, 0.2), np.arange(900, 1900, 10))
+    with pytest.raises(ValueError, match=r"900, 910, .*, 990, …, 1890 nm \(100 in all\)"):
+        br.red_slope(cube)

@@ -4,6 +4,7 @@ import json
 import math
 
 import numpy as np
+import pandas as pd
 import pytest
 import xarray as xr
 
@@ -23,6 +24,7 @@ def random_of(noise, cube=CUBE):
         np.array([0.1, 0.2, 0.3]),
         {480: 0.1, 600: 0.2, 700: 0.3, 950: 0.9},
         {481.5: 0.1, 598: 0.2, 700: 0.3},
+        pd.Series([0.3, 0.2, 0.1], index=[700, 600, 480]),
         xr.DataArray([0.3, 0.2, 0.1], {"wavelength": [700.0, 600.0, 480.0]}, "wavelength"),
     ],
 )
@@ -83,8 +85,8 @@ def test_from_csv(tmp_path):
         ("nm,random\n480,0.1\n", "wanted a column wavelength"),
         ("wavelength,random\n", "no rows below the header"),
         ("wavelength,randm\n480,0.1\n", "unknown column 'randm'; did you mean random"),
-        ("wavelength,random\n480,0.1,0.2\n", "row 2: wanted 2 values, got 3"),
-        ("wavelength,random\n480,low\n", "row 2: random must be a number, got 'low'"),
+        ("wavelength,random\n480,0.1,0.2\n", "line 2: wanted 2 values, got 3"),
+        ("wavelength,random\n480,low\n", "line 2: random must be a number, got 'low'"),
         ("wavelength,random\n480,0.1\n480,0.1\n", "the same wavelength stands in two rows"),
         ("wavelength,common_gain\n480,0.1\n600,0.2\n", "common_gain is one value for all bands"),
         ("wavelength,random\n480,-0.1\n", "noise.csv: random at 480 nm must be zero or above"),
@@ -114,6 +116,10 @@ def test_bad_tables(tmp_path, text, message):
         ({"common_gain": [0.1, 0.2]}, "common_gain must be a number"),
         ({"random": np.ones((2, 2))}, r"random has shape \(2, 2\); give one value per band, or for a map"),
         ({"relative": xr.DataArray(np.ones((2, 2)), dims=("y", "x"))}, "only random may be a map"),
+        (
+            {"random": xr.DataArray([0.1, 0.2], {"wavelength": [480.0, 480.0]}, "wavelength")},
+            "two values for one",
+        ),
         ({"random": xr.DataArray([0.1], dims="wavelength")}, "random has no wavelength coordinate"),
         ({"random": xr.DataArray([[-0.1]], dims=("y", "x"))}, "must not be negative, got a map"),
         ({"shared_within": np.array([0.5])}, "shared_within must be integer labels"),
@@ -128,6 +134,10 @@ def test_bad_values(options, message):
     ("options", "message"),
     [
         ({"random": [0.1, 0.2]}, "random has 2 values, but the cube has 3 bands"),
+        (
+            {"shared_within": np.zeros((5, 5), int)},
+            r"shared_within has the shape \(5, 5\), and the cube's pixels \(2, 2\)",
+        ),
         (
             {"band_gain": {480: 0.1, 600: 0.2}},
             r"band_gain has values at 480, 600 nm, but the cube's bands are",
@@ -199,3 +209,27 @@ def test_a_column_given_twice(tmp_path):
     path.write_text("wavelength,random,random\n480,0.1,0.2\n")
     with pytest.raises(ValueError, match="a column stands twice in wavelength, random, random"):
         br.Noise.from_csv(path)
+
+
+def test_only_the_bands_that_are_used_need_a_value():
+    noise = br.Noise(random={600: 0.001, 700: 0.002})
+    maps = br.parameters(CUBE, noise, ["red_slope"])
+    assert float(maps.red_slope_sigma[0, 0]) > 0
+    ratio = br.named_ratio("red_slope", [480, 600, 700])
+    np.testing.assert_allclose(ratio.sigma(CUBE, noise), maps.red_slope_sigma)
+    with pytest.raises(ValueError, match="random has values at 600, 700 nm"):
+        br.parameters(CUBE, noise, ["uv_vis_slope"])
+
+
+def test_a_small_tolerance_for_bands_leaves_the_noise_its_own():
+    noise = br.Noise(random={485: 0.001, 605: 0.001, 705: 0.001})
+    assert float(br.parameters(CUBE, noise, ["red_slope"], tolerance=1).red_slope_sigma[0, 0]) > 0
+    with pytest.raises(TypeError, match="tolerance must be a number"):
+        br.parameters(CUBE, noise, tolerance="wide")
+
+
+def test_a_table_that_is_no_text(tmp_path):
+    table = tmp_path / "noise.csv"
+    table.write_bytes("wavelength,random\n480,0.1 # \xb5m\n".encode("latin-1"))
+    with pytest.raises(ValueError, match=r"noise.csv is no text in UTF-8"):
+        br.Noise.from_csv(table)

@@ -192,6 +192,8 @@ BAD = [
     (({},), {}, "a band ratio needs weights"),
     (({950: 0},), {}, "a band ratio needs weights"),
     (({950: 1}, {}), {}, "the denominator is zero"),
+    (({}, {750: 1}), {}, "the numerator is zero, and every value would be"),
+    (({950: 0}, {750: 1}), {}, "the numerator is zero, and every value would be"),
     (({950: 1}, {750: 0}), {}, "the denominator is zero"),
     (({-950: 1}, {750: 1}), {}, "numerator has the wavelength -950 nm"),
     (({950: 1}, {0: 1}), {}, "denominator has the wavelength 0 nm"),
@@ -240,5 +242,5 @@ def test_bad_use():
         ratio.sigma(cube, covariance=[[1, 2], [2, 1]])
     with pytest.raises(TypeError, match="a cube must be a DataArray with a wavelength coordinate"):
         ratio.value(np.zeros((2, 3)))
-    with pytest.raises(ValueError, match="tolerance must be zero or above, got -1 nm"):
+    with pytest.raises(ValueError, match="tolerance must be zero or above and finite, got -1 nm"):
         ratio.value(cube, tolerance=-1)

@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
 from ..noise import Noise
 
-__all__ = ["band_options", "noise_from", "noise_options", "numbers"]
+if TYPE_CHECKING:
+    import xarray as xr
+
+__all__ = ["band_options", "cube_from", "names_from", "noise_from", "noise_options", "numbers"]
 
 
 def numbers(text: str | None, what: str) -> list[float] | None:
@@ -41,6 +44,39 @@ def band_options(command: Callable[..., Any]) -> Callable[..., Any]:
     ):
         command = option(command)
     return command
+
+
+def cube_from(scene: str, given: Mapping[str, Any]) -> xr.DataArray:
+    """The scene's cube, opened lazily by the options of `band_options`."""
+    from ..files import open_cube
+
+    cube: xr.DataArray = open_cube(
+        scene,
+        numbers(given["wavelengths"], "--wavelengths"),
+        fwhm=numbers(given["fwhm"], "--fwhm"),
+        quantity=given["quantity"],
+        scale=given["scale"],
+        nodata=given["nodata"],
+    )
+    return cube
+
+
+def names_from(text: str | None) -> list[str] | None:
+    """Comma-separated names, None where nothing was typed.
+
+    Raises
+    ------
+    ValueError
+        If no name is left.
+    """
+    if text is None:
+        return None
+    found = [word.strip() for word in text.split(",") if word.strip()]
+    if not found:
+        raise ValueError(
+            f"--names wants names with commas between, such as red_slope,mafic_depth, got {text!r}"
+        )
+    return found
 
 
 _NOISE = {

@@ -6,7 +6,7 @@ from typing import Any
 
 import click
 
-from ._options import band_options, numbers
+from ._options import band_options, cube_from
 
 __all__ = ["command"]
 
@@ -21,16 +21,8 @@ __all__ = ["command"]
 def command(scene: str, full: bool, **bands: Any) -> int:
     """Look for what commonly goes wrong with SCENE: scale, gaps, saturation, wavelengths."""
     from ..cube_findings import check_cube
-    from ..files import open_cube
 
-    cube = open_cube(
-        scene,
-        numbers(bands["wavelengths"], "--wavelengths"),
-        fwhm=numbers(bands["fwhm"], "--fwhm"),
-        quantity=bands["quantity"],
-        scale=bands["scale"],
-        nodata=bands["nodata"],
-    )
+    cube = cube_from(scene, bands)
     findings = check_cube(cube, full=full or None)
     for finding in findings:
         click.echo(f"- {finding}")

@@ -6,8 +6,9 @@ from typing import Any
 
 import click
 
+from ..bands import TOLERANCE_NM
 from ._geometry import count_masked, geometry_lines, geometry_options, normalised
-from ._options import band_options, noise_from, noise_options, numbers
+from ._options import band_options, cube_from, names_from, noise_from, noise_options
 from ._running import progress_bar, run_options, scheduled
 
 __all__ = ["command"]
@@ -24,7 +25,10 @@ __all__ = ["command"]
     "--names", metavar="NAME,NAME,…", help="Which parameters; all that the bands allow unless given."
 )
 @click.option(
-    "--tolerance", default=15.0, show_default=True, help="How far a band may lie from its wavelength [nm]."
+    "--tolerance",
+    default=TOLERANCE_NM,
+    show_default=True,
+    help="How far a band may lie from its wavelength [nm].",
 )
 @click.option("--parts", is_flag=True, help="Also write the random and the shared part of each sigma.")
 @click.option("--overwrite", is_flag=True, help="Replace OUT where it exists.")
@@ -49,22 +53,18 @@ def command(
     Scenes of any size are mapped block by block. OUT appears when it is whole; a run that was killed is
     continued by the same command with --resume.
     """
-    from ..files import open_cube, write_and_count
+    from ..files import write_and_count
     from ..maps import parameters
     from ._closing_table import closing_table
 
     noise = noise_from(given)
-    cube = open_cube(
-        scene,
-        numbers(given["wavelengths"], "--wavelengths"),
-        fwhm=numbers(given["fwhm"], "--fwhm"),
-        quantity=given["quantity"],
-        scale=given["scale"],
-        nodata=given["nodata"],
-    )
+    if parts and noise is None:
+        raise ValueError(
+            "--parts splits the sigmas, for which a noise is needed: give --random … or --noise FILE.csv"
+        )
+    cube = cube_from(scene, given)
     cube = normalised(cube, given)
-    wanted = names.split(",") if names else None
-    maps = parameters(cube, noise, wanted, tolerance=tolerance, parts=parts)
+    maps = parameters(cube, noise, names_from(names), tolerance=tolerance, parts=parts)
     maps.attrs |= {name: cube.attrs[name] for name in ("input", "geometry_input") if name in cube.attrs}
     with scheduled(scheduler, workers), progress_bar("mapping") as progress:
         count_masked(maps)

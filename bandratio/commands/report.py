@@ -7,7 +7,7 @@ from typing import Any
 
 import click
 
-from ._options import band_options, numbers
+from ._options import band_options, cube_from
 from ._running import scheduled
 
 __all__ = ["command"]
@@ -37,7 +37,7 @@ def command(
     **bands: Any,
 ) -> None:
     """Make one self-contained page of MAPS: linked views, candidate regions, and how they were made."""
-    from ..files import open_cube, open_maps
+    from ..files import open_maps
     from ..report import write_report
 
     context = click.get_current_context()
@@ -45,14 +45,7 @@ def command(
         opened = open_maps(maps)
         cube = None
         if scene is not None:
-            cube = open_cube(
-                scene,
-                numbers(bands["wavelengths"], "--wavelengths"),
-                fwhm=numbers(bands["fwhm"], "--fwhm"),
-                quantity=bands["quantity"],
-                scale=bands["scale"],
-                nodata=bands["nodata"],
-            )
+            cube = cube_from(scene, bands)
         written = write_report(
             opened,
             output,

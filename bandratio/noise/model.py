@@ -2,27 +2,22 @@
 
 from __future__ import annotations
 
-import csv
 import json
 from collections.abc import Mapping
 from dataclasses import KW_ONLY, dataclass
 from pathlib import Path
-from typing import Any, TypeAlias
+from typing import Any
 
 import numpy as np
 import xarray as xr
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import NDArray
 
-from ._checks import listed, non_negative, suggestion
-from .bands import TOLERANCE_NM, nearest_band, values_per_band
+from .._checks import non_negative
+from ..bands import TOLERANCE_NM, nearest_band, values_per_band
+from .table import noise_parts
+from .values import PER_BAND, below_one, checked_part, integer_labels
 
-__all__ = ["BandNoise", "Noise", "PerBand", "brightness_factor_of"]
-
-#: A number for all bands, {nm: value}, a DataArray on wavelength, or a list of the cube's length.
-PerBand: TypeAlias = "float | Mapping[float, float] | xr.DataArray | ArrayLike"
-
-_PER_BAND = ("random", "relative", "band_gain", "band_offset", "shot")
-_FRACTIONS = ("relative", "band_gain", "common_gain")
+__all__ = ["BandNoise", "Noise", "brightness_factor_of"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -81,7 +76,8 @@ class Noise:
 
     A third nature comes with the cube, not from here: the error of a photometric normalisation is common to the
     bands of a pixel and new in each pixel. `normalise` leaves it on the cube as the coordinate `pixel_gain` [1]; like
-    `common_gain` it cancels in a pure ratio, and like `random` it averages away.
+    `common_gain` it cancels in a pure ratio, and like `random` it averages away; where the elevation model is coarser
+    than the pixels it does so more slowly, which `region_means` takes as its `correlation_area`.
 
     All of it is stated **for the cube as it came**, before `normalise` and `convert_quantity`. These multiply each
     reflectance, and with it the errors that are no fraction of it, by a factor f that they leave on the cube as the
@@ -129,12 +125,12 @@ class Noise:
     shared_within: Any = None
 
     def __post_init__(self) -> None:
-        for part in _PER_BAND:
-            object.__setattr__(self, part, _checked(part, getattr(self, part)))
+        for part in PER_BAND:
+            object.__setattr__(self, part, checked_part(part, getattr(self, part)))
         common = non_negative("common_gain", self.common_gain)
-        object.__setattr__(self, "common_gain", _fraction("common_gain", common))
+        object.__setattr__(self, "common_gain", below_one("common_gain", common))
         if self.shared_within is not None:
-            object.__setattr__(self, "shared_within", _labels(self.shared_within))
+            object.__setattr__(self, "shared_within", integer_labels(self.shared_within))
 
     @classmethod
     def from_csv(cls, path: str | Path) -> Noise:
@@ -148,45 +144,14 @@ class Noise:
         ValueError
             With the file and line, where a column is unknown or a value is no number.
         """
-        path = Path(path)
-        known = ("wavelength", *_PER_BAND, "common_gain")
-        with path.open(newline="", encoding="utf-8-sig") as stream:
-            lines = [line for line in stream if line.strip() and not line.startswith("#")]
-        rows = list(csv.reader(lines, skipinitialspace=True))
-        header = [name.strip() for name in rows[0]] if rows else []
-        if "wavelength" not in header:
-            raise ValueError(f"{path}: wanted a column wavelength [nm], got {listed(header)}")
-        for name in header:
-            if name not in known:
-                raise ValueError(f"{path}: unknown column {name!r}{suggestion(name, known)}")
-        if len(set(header)) != len(header):
-            raise ValueError(f"{path}: a column stands twice in {listed(header)}")
-        if len(rows) < 2:
-            raise ValueError(f"{path}: no rows below the header; wanted one row per band")
-        columns: dict[str, list[float]] = {name: [] for name in header}
-        for number, row in enumerate(rows[1:], start=2):
-            if len(row) != len(header):
-                raise ValueError(f"{path}, row {number}: wanted {len(header)} values, got {len(row)}")
-            for name, text in zip(header, row, strict=True):
-                try:
-                    columns[name].append(float(text))
-                except ValueError:
-                    raise ValueError(f"{path}, row {number}: {name} must be a number, got {text!r}") from None
-        wavelength = columns.pop("wavelength")
-        if len(set(wavelength)) != len(wavelength):
-            raise ValueError(f"{path}: the same wavelength stands in two rows")
-        common = set(columns.pop("common_gain", [0.0]))
-        if len(common) > 1:
-            raise ValueError(f"{path}: common_gain is one value for all bands, got {listed(sorted(common))}")
         try:
-            parts: dict[str, Any] = {
-                name: dict(zip(wavelength, values, strict=True)) for name, values in columns.items()
-            }
-            return cls(**parts, common_gain=common.pop())
+            return cls(**noise_parts(Path(path)))
         except ValueError as error:
-            raise ValueError(f"{path}: {error}") from None
+            raise ValueError(str(error) if str(error).startswith(str(path)) else f"{path}: {error}") from None
 
-    def for_cube(self, cube: xr.DataArray, tolerance: float = TOLERANCE_NM) -> BandNoise:
+    def for_cube(
+        self, cube: xr.DataArray, tolerance: float = TOLERANCE_NM, *, used: NDArray[np.bool_] | None = None
+    ) -> BandNoise:
         """Every part spelled out for the bands of a cube.
 
         Parameters
@@ -195,18 +160,23 @@ class Noise:
             Reflectance with a `wavelength` dimension [nm]; its coordinates `pixel_gain` and `brightness_factor` are
             taken along, where there are any.
         tolerance : float
-            Largest distance between a band's centre and the wavelength of a value [nm].
+            Largest distance between a band's centre and the wavelength of a value [nm]; one below the usual 15 nm,
+            which picks among narrow bands, leaves that of the noise as it is.
+        used : ndarray of bool, shape (band,), optional
+            Bands that must have a value; the others are NaN where they have none. None: all.
 
         Raises
         ------
         ValueError
             If a list's length is not the cube's number of bands, a band has no value, or a map of `random`
-            does not fit the cube.
+            or `shared_within` does not fit the cube.
         """
+        tolerance = max(tolerance, TOLERANCE_NM)
+        _require_fitting_labels(self.shared_within, cube)
         centres = np.asarray(cube["wavelength"].values, dtype=float)
         parts = {
-            part: _for_bands(part, getattr(self, part), centres, tolerance)
-            for part in _PER_BAND
+            part: _for_bands(part, getattr(self, part), centres, tolerance, used)
+            for part in PER_BAND
             if part != "random" or not self.random_is_map
         }
         if self.random_is_map:
@@ -279,65 +249,26 @@ def _is_there(part: Any) -> bool:
     return any(part.values()) if isinstance(part, Mapping) else bool(np.any(part))
 
 
-def _checked(part: str, value: Any) -> Any:
-    if isinstance(value, xr.DataArray):
-        extra = set(value.dims) - {"wavelength"}
-        if extra and part != "random":
-            raise ValueError(f"{part} is one value per band; only random may be a map, got {value.dims}")
-        if "wavelength" in value.dims and "wavelength" not in value.coords:
-            raise ValueError(f"{part} has no wavelength coordinate; give it one in nm")
-        if not extra and value.ndim == 0:
-            return _checked(part, value.item())
-        if not extra:
-            _checked(part, dict(zip(value["wavelength"].values.tolist(), value.values.tolist(), strict=True)))
-        elif value.chunks is None and (value.values < 0).any():
-            raise ValueError(f"{part} must not be negative, got a map that is in places")
-        return value
-    if isinstance(value, Mapping):
-        if not value:
-            raise ValueError(f"{part} is an empty mapping; give {{wavelength in nm: value}}")
-        checked = {}
-        for key, item in value.items():
-            try:
-                wavelength = float(key)
-            except (TypeError, ValueError):
-                raise TypeError(f"{part} must map wavelengths in nm to values, got the key {key!r}") from None
-            checked[wavelength] = _fraction(part, non_negative(f"{part} at {wavelength:g} nm", item))
-        return checked
-    if isinstance(value, str):
-        raise TypeError(f"{part} must be a number or one value per band, got {value!r}")
-    array = np.asarray(value)
-    if array.ndim == 0:
-        return _fraction(part, non_negative(part, value))
-    if array.ndim > 1:
+def _require_fitting_labels(labels: xr.DataArray | NDArray | None, cube: xr.DataArray) -> None:
+    if labels is None:
+        return
+    pixels = tuple(size for dim, size in cube.sizes.items() if dim != "wavelength")
+    if isinstance(labels, xr.DataArray):
+        fits = all(dim in cube.dims and cube.sizes[dim] == size for dim, size in labels.sizes.items())
+    else:
+        fits = labels.shape == pixels
+    if not fits:
         raise ValueError(
-            f"{part} has shape {array.shape}; give one value per band, or for a map of random a DataArray with "
-            "the cube's dimensions"
+            f"shared_within has the shape {tuple(labels.shape)}, and the cube's pixels {pixels}; give one label for each"
         )
-    numbers = np.array(
-        [_fraction(part, non_negative(f"{part}, value {i + 1},", x)) for i, x in enumerate(array)]
-    )
-    numbers.setflags(write=False)
-    return numbers
 
 
-def _fraction(part: str, value: float) -> float:
-    if part in _FRACTIONS and value >= 1:
-        raise ValueError(f"{part} is a fraction below 1, got {value:g}; {value:g} % is {value / 100:g}")
-    return value
-
-
-def _labels(labels: Any) -> xr.DataArray | NDArray:
-    array = labels if isinstance(labels, xr.DataArray) else np.asarray(labels)
-    if not np.issubdtype(array.dtype, np.integer):
-        raise TypeError(f"shared_within must be integer labels, one per pixel, got {array.dtype}")
-    return array
-
-
-def _for_bands(part: str, value: Any, centres: NDArray, tolerance: float) -> xr.DataArray:
+def _for_bands(
+    part: str, value: Any, centres: NDArray, tolerance: float, used: NDArray[np.bool_] | None
+) -> xr.DataArray:
     if isinstance(value, xr.DataArray):
         value = dict(zip(value["wavelength"].values.tolist(), value.values.tolist(), strict=True))
-    array = values_per_band(part, value, centres, tolerance)
+    array = values_per_band(part, value, centres, tolerance, needed=used)
     return xr.DataArray(array, dims="wavelength", coords={"wavelength": centres})
 
 
