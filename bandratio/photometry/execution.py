@@ -61,39 +61,56 @@ def lazily(
     pairs = [item for plane in spread_out for item in (plane, pixel)]
     common: dict[str, Any] = {"correction": correction, "names": tuple(planes), "concatenate": True}
 
-    def lazy_plane(part: str, dtype: Any) -> Any:
-        # values are needed for the flags only where the law itself can refuse them
-        if part == "flag" and isinstance(correction.laws[0], Hapke):
-            return da.blockwise(_part, pixel, data, "z" + pixel, *pairs, part=part, dtype=dtype, **common)
-        return da.blockwise(
-            _part_of_geometry, pixel, *pairs, part=part, kind=data.dtype, dtype=dtype, **common
-        )
-
+    # one task a block makes all that the maps need; it is taken apart afterwards
+    bands, per_band = data.shape[0], 1 if correction.bands_alike else data.shape[0]
     index = "z" + pixel
-    values = da.blockwise(_part, index, data, index, *pairs, part="values", dtype=data.dtype, **common)
-    gain = lazy_plane("gain", np.float32) if correction.has_sigma else None
-    if correction.bands_alike:
-        factor = lazy_plane("factor", np.float32)
-    else:
-        factor = da.blockwise(_part, index, data, index, *pairs, part="factor", dtype=np.float32, **common)
-    return values, lazy_plane("flag", np.int8), gain, factor
+    stack = da.blockwise(
+        _stacked,
+        index,
+        data,
+        index,
+        *pairs,
+        per_band=per_band,
+        dtype=data.dtype,
+        adjust_chunks={"z": bands + 1 + per_band},
+        **common,
+    )
+    gain = stack[bands].astype(np.float32) if correction.has_sigma else None
+    factor = stack[bands + 1] if correction.bands_alike else stack[bands + 1 :]
+    return stack[:bands], _lazy_flags(correction, data, planes, pixel, pairs), gain, factor.astype(np.float32)
 
 
-def _part(
-    values: NDArray, *planes: NDArray, correction: Correction, names: tuple[str, ...], part: str
+def _lazy_flags(
+    correction: Correction, data: Any, planes: Mapping[str, xr.DataArray], pixel: str, pairs: list[Any]
+) -> Any:
+    import dask.array as da
+
+    common: dict[str, Any] = {"correction": correction, "names": tuple(planes), "dtype": np.int8}
+    # values are needed for the flags only where the law itself can refuse them
+    if isinstance(correction.laws[0], Hapke):
+        return da.blockwise(_flags, pixel, data, "z" + pixel, *pairs, concatenate=True, **common)
+    return da.blockwise(_flags_of_geometry, pixel, *pairs, kind=data.dtype, **common)
+
+
+def _stacked(
+    values: NDArray, *planes: NDArray, correction: Correction, names: tuple[str, ...], per_band: int
 ) -> NDArray:
-    named = dict(zip(names, planes, strict=True))
-    out, flag, _, factor = _run(values, named, correction, sigma=False, brightness=part == "factor")
-    return {"flag": flag, "values": out, "factor": factor}[part]
+    """Normalised values, relative sigma and brightness factors, one upon the other."""
+    bands = values.shape[0]
+    stack = np.empty((bands + 1 + per_band, *values.shape[1:]), dtype=values.dtype)
+    _run(values, dict(zip(names, planes, strict=True)), correction, stack=stack)
+    return stack
 
 
-def _part_of_geometry(
-    *planes: NDArray, correction: Correction, names: tuple[str, ...], part: str, kind: Any
+def _flags(values: NDArray, *planes: NDArray, correction: Correction, names: tuple[str, ...]) -> NDArray:
+    return _run(values, dict(zip(names, planes, strict=True)), correction, sigma=False, brightness=False)[1]
+
+
+def _flags_of_geometry(
+    *planes: NDArray, correction: Correction, names: tuple[str, ...], kind: Any
 ) -> NDArray:
     none = np.empty((0, *planes[0].shape), dtype=kind)
-    named = dict(zip(names, planes, strict=True))
-    _, flag, gain, factor = _run(none, named, correction, sigma=part == "gain", brightness=part == "factor")
-    return {"flag": flag, "gain": gain, "factor": factor}[part]
+    return _run(none, dict(zip(names, planes, strict=True)), correction, sigma=False, brightness=False)[1]
 
 
 def _run(
@@ -104,18 +121,27 @@ def _run(
     *,
     sigma: bool = True,
     brightness: bool = True,
+    stack: NDArray | None = None,
 ) -> tuple[NDArray, NDArray, NDArray, NDArray]:
-    """Arrays of a cube or of one block of it; no bands in `values`: what the geometry alone tells."""
+    """Arrays of a cube or of one block of it; no bands in `values`: what the geometry alone tells.
+
+    With `stack`, shape (band + 1 + factors, …), values, sigma and factors are written into it.
+    """
     shape = values.shape[1:]
     bands, pixels = values.shape[0], math.prod(shape)
     flat = np.ascontiguousarray(values).reshape(bands, pixels)
     whole = {name: np.broadcast_to(plane, shape).reshape(-1) for name, plane in planes.items()}
-    out = np.empty((bands, pixels), dtype=values.dtype)
     flag = np.empty(pixels, dtype=np.int8)
     sigma = sigma and correction.has_sigma
-    gain = np.empty(pixels if sigma else 0, dtype=np.float32)
     alike = correction.bands_alike
-    factor = np.empty((brightness * (1 if alike else bands), pixels), dtype=np.float32)
+    if stack is None:
+        out = np.empty((bands, pixels), dtype=values.dtype)
+        gain = np.empty(pixels if sigma else 0, dtype=np.float32)
+        factor = np.empty((brightness * (1 if alike else bands), pixels), dtype=np.float32)
+    else:
+        whole_stack = stack.reshape(-1, pixels)
+        out, gain = whole_stack[:bands], whole_stack[bands] if sigma else np.empty(0, stack.dtype)
+        factor = whole_stack[bands + 1 :]
     do = _compiled if correction.mixed_only else _plane_by_plane
     threads = max(1, min(threads, pixels // _THREAD_PIXELS))
     stretch = _BLOCK_PIXELS if do is _plane_by_plane else -(-pixels // (1 if threads == 1 else 8 * threads))
