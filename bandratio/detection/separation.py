@@ -59,5 +59,7 @@ class Separation:
     @classmethod
     def from_description(cls, told: Mapping[str, Any]) -> Separation:
         """Make the separation that :meth:`describe` told of, with an empty curve."""
-        values = {name: tuple(value) if isinstance(value, list) else value for name, value in told.items()}
+        values: dict[str, Any] = {
+            name: tuple(value) if isinstance(value, list) else value for name, value in told.items()
+        }
         return cls(**values, curve=np.empty((2, 0)))

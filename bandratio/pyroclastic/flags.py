@@ -173,6 +173,7 @@ def _limits(
         except (TypeError, ValueError) as error:
             raise type(error)(f"{argument}: {error}") from None
         limit.check_map(maps[parameter])
+        limit.check_direction("above" if argument == "brighter_than" else "below")
         limits[argument] = limit
     if "flatter_than" in limits and maps[BRIGHTNESS].sizes != maps[SLOPE].sizes:
         raise ValueError(

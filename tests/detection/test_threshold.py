@@ -184,6 +184,9 @@ def test_a_file_of_thresholds_round_trips(tmp_path):
     made = br.thresholds(spectra, "mafic_depth", "olivine", "plagioclase", noise=br.Noise(relative=0.01))
     file = br.write_thresholds(made, tmp_path / "thresholds.json")
     assert br.read_thresholds(file) == made
+    read, wrote = (each["mafic_depth"].separation for each in (br.read_thresholds(file), made))
+    assert read == wrote  # all but the curve
+    assert read.curve.size == 0
     assert br.read_thresholds(file, "mafic_depth") == made
     assert json.loads(file.read_text())["mafic_depth"]["separation"]["n_unwanted"] == 4
     assert [path.name for path in tmp_path.iterdir()] == ["thresholds.json"]
@@ -198,3 +201,18 @@ def test_files_that_hold_no_thresholds(tmp_path, text):
     (tmp_path / "thresholds.json").write_text(text)
     with pytest.raises(ValueError, match=r"thresholds\.json: not a file of thresholds"):
         br.read_thresholds(tmp_path / "thresholds.json")
+
+
+def test_the_side_of_the_wanted_is_remembered(tmp_path):
+    spectra = br.reference_spectra([600, 700])
+    made = br.thresholds(spectra, "reflectance_700", "opaque", "plagioclase", false_alarm_rate=0.1)
+    file = br.write_thresholds(made, tmp_path / "dark.json")
+    maps = br.parameters(spectra, br.Noise(relative=0.01))
+    for threshold in (made["reflectance_700"], br.read_thresholds(file)["reflectance_700"]):
+        threshold.check_direction("below")
+        with pytest.raises(
+            ValueError, match="made for wanted values below it, and values above it are asked for"
+        ):
+            br.pyroclastic_flags(maps, brighter_than=threshold)
+        assert "flag" in br.pyroclastic_flags(maps, darker_than=threshold)
+    br.Threshold(0.1).check_direction("above")
