@@ -262,15 +262,7 @@ def _one_channel(
     net, live, quality = net_energy(energy, quality, background, channel)
     with np.errstate(invalid="ignore"):
         factor = albedo_per_energy(range_m, incidence, transmitted, channel.constant)
-        variance = return_variance(
-            net,
-            background,
-            energy_per_count=channel.energy_per_count,
-            background_sigma=channel.background_sigma,
-            read_noise=channel.read_noise,
-            live=live,
-        )
-    variance = np.where(np.isnan(stated), variance, stated**2)
+        variance = np.where(np.isnan(stated), _variance(net, background, live, channel), stated**2)
     if channel.limit is None:
         dropouts = int((quality == QUALITY["dropout"]).sum())
         if dropouts and name == "infrared":  # a missing red is no data whatever its limit
@@ -283,13 +275,7 @@ def _one_channel(
         below = channel.limit if channel.background_subtracted else np.maximum(channel.limit - background, 0)
         limit = np.where(quality <= QUALITY["dropout"], below * factor, np.nan)
         # a dropout has no energy of its own: its errors are those of a return at the limit
-        at_limit = return_variance(
-            below,
-            background,
-            energy_per_count=channel.energy_per_count,
-            background_sigma=channel.background_sigma,
-            read_noise=channel.read_noise,
-        )
+        at_limit = _variance(below, background, 1.0, channel)
         variance = np.where(quality == QUALITY["dropout"], at_limit, variance)
     used = quality == QUALITY["good"]
     albedo = np.where(used, net * factor, np.nan)
@@ -303,6 +289,19 @@ def _one_channel(
     shared = channel.constant_sigma / channel.constant * np.abs(level)
     total = np.sqrt(random**2 + shared**2)
     return albedo, total, random, shared, additive, both, per_count, relative, limit, quality.astype(np.int8)
+
+
+def _variance(
+    net: NDArray | float, background: NDArray, live: NDArray | float, channel: LidarChannel
+) -> NDArray[np.float64]:
+    return return_variance(
+        net,
+        background,
+        energy_per_count=channel.energy_per_count,
+        background_sigma=channel.background_sigma,
+        read_noise=channel.read_noise,
+        live=live,
+    )
 
 
 def _common_relative(

@@ -37,6 +37,7 @@ def net_energy(
         saturated |= energy >= channel.saturation
     if channel.dead_time_s:
         live = live_fraction(energy / channel.energy_per_count, channel.dead_time_s, channel.gate_s)
+        live = np.where(np.isnan(live), 1.0, live)  # no return, nothing to correct
         saturated |= live < channel.least_live
     quality[saturated] = QUALITY["saturated"]
     with np.errstate(divide="ignore", invalid="ignore"):
