@@ -1,5 +1,7 @@
 """The compiled loop against the readable reference path, on random ratios, noise and bands, gaps included."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 import xarray as xr
@@ -41,6 +43,17 @@ def cubes(draw, dtype):
     gaps = rng.random(shape) < draw(st.sampled_from([0.0, 0.1]))
     R[gaps] = np.nan
     return br.as_cube(R, WAVELENGTHS)
+
+
+@st.composite
+def brightened(draw, dtype):
+    """A cube whose reflectances were multiplied since they were measured: alike, by band, by pixel, or by both."""
+    cube = draw(cubes(dtype))
+    pixels = cube.dims[1:]
+    dims = draw(st.sampled_from([(), ("wavelength",), pixels, cube.dims]))
+    rng = np.random.default_rng(draw(st.integers(0, 2**32 - 1)))
+    factor = rng.uniform(0.3, 3.0, [cube.sizes[dim] for dim in dims]).astype("f4")
+    return cube.assign_coords(brightness_factor=(dims, factor))
 
 
 def plain(ratio, cube, noise):
@@ -94,11 +107,25 @@ def test_agrees_with_the_readable_path_in_float32(data):
     compare(maps, ratio, cube, noise, rtol=1e-5)
 
 
+@pytest.mark.parametrize(("dtype", "rtol"), [("f8", 1e-9), ("f4", 1e-5)])
+@pytest.mark.parametrize("parts", [False, True])
+@given(data=st.data())
+@settings(max_examples=40)
+def test_agrees_with_the_readable_path_after_reflectances_were_multiplied(parts, dtype, rtol, data):
+    ratio, noise, cube = data.draw(ratios()), data.draw(noises()), data.draw(brightened(dtype))
+    if cube.ndim == 3 and data.draw(st.booleans()):
+        noise = replace(
+            noise, random=xr.full_like(cube[0].drop_vars(["wavelength", "brightness_factor"]), 0.01)
+        )
+    compare(br.parameters(cube, noise, [ratio], parts=parts), ratio, cube, noise, rtol)
+
+
 @given(data=st.data())
 @settings(max_examples=15)
 def test_lazy_and_in_memory_are_the_same(data):
     ratio, noise = data.draw(ratios()), data.draw(noises())
-    cube = data.draw(cubes("f4").filter(lambda c: c.ndim == 3))
+    either = st.one_of(cubes("f4"), brightened("f4"))
+    cube = data.draw(either.filter(lambda c: c.ndim == 3))
     maps = br.parameters(cube, noise, [ratio], parts=True)
     lazy = br.parameters(cube.chunk(wavelength=2, y=4, x=17), noise, [ratio], parts=True)
     assert all(variable.chunks is not None for variable in lazy.data_vars.values())
