@@ -269,6 +269,30 @@ def test_olivine_and_low_calcium_pyroxene_against_plagioclase(lab):
     assert threshold.quantity == "reflectance_factor"
 
 
+@pytest.mark.parametrize(
+    ("name", "bands", "share"),
+    [
+        ("mafic_depth", [600, 750, 830], 0.89),
+        ("mafic_depth", [600, 700, 830], 0.89),
+        ("mafic_depth_continuum", [600, 750, 830], 0.82),
+        ("r950_r750", [750, 950], 0.96),
+    ],
+)
+def test_how_often_a_mafic_sample_is_ranked_above_a_plagioclase(lab, name, bands, share):
+    """Shares of pairs on the folder's values.csv, 4 plagioclases against 21 mafic samples, each sample by itself."""
+    library = br.open_library(lab / "values.csv")
+    spectra = br.band_average(library, bands)
+    kinds = np.array([str(sample).split()[0] for sample in library.sample.values])
+    mafic = np.isin(
+        kinds,
+        ["Olivine", "Hypersthene", "Bronzite", "Enstatite", "Pigeonite", "Augite", "Diopside", "Basalt"],
+    )
+    plagioclase = np.isin(kinds, ["Anorthite", "Bytownite", "Labradorite"])
+    assert (mafic.sum(), plagioclase.sum()) == (21, 4)
+    threshold = br.thresholds(spectra, name, mafic, plagioclase)[name]
+    assert threshold.separation.area == pytest.approx(share, abs=0.006)
+
+
 def test_the_shoulder_follows_the_bands():
     spectra = br.reference_spectra([600, 700, 830])
     threshold = br.thresholds(spectra, "mafic_depth", "olivine", "plagioclase")["mafic_depth"]
