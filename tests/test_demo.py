@@ -2,12 +2,13 @@
 
 import numpy as np
 import pytest
+import xarray as xr
 
 import bandratio as br
 from bandratio.demo import make_basin, range_counts, run_demo, see
 from bandratio.demo.basin import MATERIALS
-from bandratio.demo.job import normalised_scene
-from bandratio.demo.scene import BANDS_NM, material_spectra
+from bandratio.demo.job import LIMITS, normalised_scene, truth_table
+from bandratio.demo.scene import BANDS_NM, NOISE, material_spectra
 
 
 @pytest.fixture(scope="module")
@@ -85,21 +86,62 @@ def test_candidate_ice_is_where_frost_is(basin):
     assert (candidates & ~icy).sum() <= 0.05 * candidates.sum() + 3
 
 
-def test_run_demo_leaves_scene_maps_and_picture(tmp_path):
+def test_run_demo_does_every_job_and_tells_what_it_found(tmp_path):
     folder = tmp_path / "corvane"
-    result = run_demo(folder, side=96)
-    assert {path.name for path in folder.iterdir()} >= {"scene.tif", "angles.tif", "maps.tif", "corvane.png"}
-    assert not [path for path in folder.iterdir() if path.name.startswith(".")]
+    result = run_demo(folder, side=160)
+    names = {path.name for path in folder.iterdir()}
+    assert names == {path.name for path in result.files}
+    assert {
+        "scene.tif",
+        "maps.tif",
+        "flags.tif",
+        "ice.nc",
+        "truth.csv",
+        "corvane.png",
+        "corvane.html",
+    } <= names
+
     maps = br.open_maps(folder / "maps.tif")
-    np.testing.assert_array_equal(maps["red_slope"], result["maps"]["red_slope"])
-    np.testing.assert_array_equal(maps["red_slope_sigma"], result["maps"]["red_slope_sigma"])
+    np.testing.assert_array_equal(maps["red_slope"], result.maps["red_slope"])
+    np.testing.assert_array_equal(maps["red_slope_sigma"], result.maps["red_slope_sigma"])
     assert maps.rio.crs.to_dict()["R"] == 1_100_000
+    np.testing.assert_array_equal(br.open_maps(folder / "flags.tif")["flag"], result.flags["flag"])
     cube = br.open_cube(folder / "scene.tif")
     np.testing.assert_array_equal(cube["wavelength"], BANDS_NM)
     assert br.check_cube(cube) == []
+    shots = br.open_returns(folder / "shots.parquet", red="red", infrared="infrared", zero="dropout")
+    assert shots.sizes["shot"] == result.ice.sizes["shot"]
+
+    truth = result.truth.set_index("kind")
+    assert (truth["found"] > 0).all()
+    assert (truth["found"] <= truth["planted"] + truth["false"]).all()
+    # the promise holds on average over scenes; this one, with few candidates, may miss it by one or two
+    assert (truth["false"] <= 0.05 * truth["found"] + 2).all()
+
     with pytest.raises(FileExistsError, match=r"scene.tif exists; give --overwrite"):
-        run_demo(folder, side=96)
-    run_demo(folder, side=96, overwrite=True)
+        run_demo(folder, side=160)
+
+
+def test_the_false_discovery_rate_holds_over_scenes():
+    """Bright and dark candidates of the basin, mean false share over 40 draws of every error, shared ones too."""
+    basin = make_basin(96)
+    shares = []
+    for seed in range(40):
+        scene = see(basin, seed)
+        maps = br.parameters(normalised_scene(scene), NOISE, ["reflectance_700", "red_slope"], parts=True)
+        flags = br.pyroclastic_flags(maps, **LIMITS)
+        returns = range_counts(basin, seed)
+        truth = truth_table(scene, flags, returns, _no_ice(returns)).set_index("kind")
+        both = truth.loc[["bright_candidate", "dark_candidate"]].sum()
+        shares.append(both["false"] / max(both["found"], 1))
+    standard_error = np.std(shares, ddof=1) / np.sqrt(len(shares))
+    assert np.mean(shares) <= 0.05 + 3 * standard_error
+
+
+def _no_ice(returns):
+    words = "no_data ice_free opaque_like undecided unexplained ice_candidate"
+    flag = xr.zeros_like(returns["red"], dtype="i1").assign_attrs(flag_values=range(6), flag_meanings=words)
+    return flag.to_dataset(name="flag")
 
 
 def test_a_scene_too_small_for_its_parts_is_refused():

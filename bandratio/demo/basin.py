@@ -25,7 +25,7 @@ MATERIALS = {
     "outcrop": {"Soil 62231": 0.45, "Bronzite HS9.3B": 0.35, "Olivine KI3054 Fo66 <60 µm": 0.20},
     "opaque flow": {"Basalt fresh BR93-46B": 0.55, "Ilmenite HS231.3B": 0.45},
     "bright mantle": {"Bytownite HS105.3B": 0.55, "Soil 62231": 0.45},
-    "dark mantle": {"Magnetite HS195.3B": 0.50, "Basalt fresh BR93-46B": 0.50},
+    "dark mantle": {"Magnetite HS195.3B": 0.75, "Basalt fresh BR93-46B": 0.25},
     "frost": {"Snow mSnw05": 1.0},
 }
 

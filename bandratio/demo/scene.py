@@ -34,7 +34,7 @@ BANDS_NM = (480.0, 600.0, 700.0, 750.0, 830.0)
 FWHM_NM = (25.0, 25.0, 25.0, 20.0, 30.0)
 SUN_AZIMUTH_DEG, SUN_ELEVATION_DEG = 110.0, 28.0
 #: What is known about the camera's errors, and what the scene is made with.
-NOISE = Noise(random=0.0003, shot=0.0012, band_gain=0.003, band_offset=0.0001, common_gain=0.02)
+NOISE = Noise(random=0.0002, shot=0.0008, band_gain=0.002, band_offset=0.00005, common_gain=0.02)
 #: Map projection: an invented sphere.
 CRS = f"+proj=eqc +lat_ts=0 +lon_0=0 +R={RADIUS_M:.0f} +units=m +no_defs"
 #: Sky-lit floor of a shadow, as a share of the light on level ground: light scattered from the slopes around.
