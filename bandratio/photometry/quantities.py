@@ -175,11 +175,12 @@ def convert_quantity(
 
 def multiplied(cube: xr.DataArray, factor: xr.DataArray) -> xr.Variable:
     """The coordinate `brightness_factor` of a cube whose reflectances are multiplied once more."""
+    # both lie on the cube's pixels, so there is nothing to align by coordinates
+    product = factor.drop_vars(list(factor.coords))
     before = brightness_factor_of(cube)
     if isinstance(before, xr.DataArray):
-        # both lie on the cube's pixels, so there is nothing to align by coordinates
-        before = before.drop_vars(list(before.coords))
-    product = (before * factor.drop_vars(list(factor.coords))).astype(np.float32)
+        product = before.drop_vars(list(before.coords)) * product
+    product = product.astype(np.float32, copy=False)
     order = [dim for dim in cube.dims if dim in product.dims]
     return product.transpose(*order).assign_attrs(_BRIGHTNESS).variable
 
