@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -21,6 +22,8 @@ __all__ = ["CAUTION", "FLAG_MEANINGS", "pyroclastic_flags"]
 FLAG_MEANINGS = ("no_data", "background", "undecided", "bright_candidate", "dark_candidate")
 CAUTION = "flags are indicators to follow up, never proof of a pyroclastic deposit"
 
+#: Pixels that are worked on at once: what is made on the way stays in the second-level cache.
+_STRETCH = 65_536
 #: Pixels that are looked at for the errors of a threshold from the scene.
 _SAMPLE = 1_000_000
 
@@ -289,22 +292,33 @@ def _block(
 ) -> NDArray[np.float64]:
     from .kernel import p_values
 
-    shape = arrays[0].shape
     flat = {name: np.ascontiguousarray(array).reshape(-1) for name, array in zip(names, arrays, strict=True)}
-    out = np.empty((len(rules), *shape))
-    for place, rule in enumerate(rules):
-        kept = [
-            c.kept.not_cancelling(c.parameter, flat[BRIGHTNESS], flat.get(SLOPE)) if c.kept else None
-            for c in rule
-        ]
-        out[place] = p_values(
-            [flat[c.parameter] for c in rule],
-            [None if c.sigma is None else flat[c.sigma] for c in rule],
-            kept,
-            np.array([c.settings for c in rule], dtype=float),
-            threads=threads,
-        ).reshape(shape)
-    return out
+    pixels = arrays[0].size
+    out = np.empty((len(rules), pixels))
+
+    def run(start: int) -> None:
+        here = {name: array[start : start + _STRETCH] for name, array in flat.items()}
+        for place, rule in enumerate(rules):
+            kept = [
+                c.kept.not_cancelling(c.parameter, here[BRIGHTNESS], here.get(SLOPE)) if c.kept else None
+                for c in rule
+            ]
+            p_values(
+                [here[c.parameter] for c in rule],
+                [None if c.sigma is None else here[c.sigma] for c in rule],
+                kept,
+                np.array([c.settings for c in rule], dtype=float),
+                out[place, start : start + _STRETCH],
+            )
+
+    starts = range(0, pixels, _STRETCH)
+    if threads == 1 or len(starts) < 2:
+        for start in starts:
+            run(start)
+    else:
+        with ThreadPoolExecutor(threads) as pool:
+            list(pool.map(run, starts))
+    return out.reshape(len(rules), *arrays[0].shape)
 
 
 def _flags(p: Any, codes: NDArray[np.int8], cut: float) -> Any:

@@ -14,6 +14,8 @@ __all__ = ["SETTINGS", "flags_of", "p_values"]
 
 #: Below this many pixels a second thread costs more than it brings.
 _THREAD_PIXELS = 65_536
+#: Pixels per block of the loop.
+_BLOCK = 1024
 #: Columns of a condition's settings: see `p_values`.
 SETTINGS = ("sign", "limit", "variance", "per_reflectance", "per_square", "in_proportion")
 
@@ -23,14 +25,13 @@ def p_values(
     sigmas: list[NDArray | None],
     kept: list[NDArray | None],
     settings: NDArray[np.float64],
-    *,
-    threads: int = 1,
-) -> NDArray[np.float64]:
+    out: NDArray[np.float64],
+) -> None:
     """P-value of "every condition holds" for each pixel, by intersection and union (Berger 1982).
 
     Parameters
     ----------
-    values : list of ndarray of one dtype, shape (pixel,)
+    values : list of one or two ndarrays of one dtype, shape (pixel,)
         One parameter for each condition; missing is NaN.
     sigmas : list of ndarray or None, shape (pixel,)
         Its standard uncertainty; None: the comparison is exact.
@@ -40,81 +41,69 @@ def p_values(
         ``sign``: +1 for above, −1 for below; ``limit``: the threshold; ``variance``: the same for all pixels;
         ``per_reflectance`` and ``per_square``: growth of the variance from the measured value up to the limit,
         per R and per R²; ``in_proportion``: 1 where sigma is taken to grow in proportion to the reflectance.
-    threads : int
-        How many threads share the pixels.
-
-    Returns
-    -------
-    ndarray, shape (pixel,)
-        ``Φ(−min z)``; with a variance of zero 0 where all conditions hold strictly, else 1. NaN where a value or
+    out : ndarray, shape (pixel,)
+        Gets ``Φ(−min z)``; with a variance of zero 0 where all conditions hold strictly, else 1. NaN where a value or
         a sigma is missing.
     """
-    pixels = values[0].size
-    out = np.empty(pixels)
     nothing = np.empty(0, dtype=values[0].dtype)
-
-    def column(arrays: list[NDArray | None], place: int) -> NDArray:
-        array = arrays[place] if place < len(arrays) else None
-        return nothing if array is None else array
-
+    columns: list[NDArray] = []
+    for place in (0, 1):
+        for arrays in (values, sigmas, kept):
+            array = arrays[place] if place < len(arrays) else None
+            columns.append(nothing if array is None else array)
     compiled: Any = _loop
-
-    def run(start: int, stop: int) -> None:
-        parts: list[NDArray] = []
-        for place in (0, 1):
-            value = values[place] if place < len(values) else nothing
-            three = value, column(sigmas, place), column(kept, place)
-            parts.extend(np.ascontiguousarray(array[start:stop]) for array in three)
-        compiled(*parts, settings[0], settings[-1], out[start:stop])
-
-    threads = max(1, min(threads, pixels // _THREAD_PIXELS))
-    stretch = max(1, -(-pixels // (4 * threads))) if threads > 1 else max(1, pixels)
-    starts = range(0, pixels, stretch)
-    if threads == 1:
-        for start in starts:
-            run(start, start + stretch)
-    else:
-        with ThreadPoolExecutor(threads) as pool:
-            list(pool.map(lambda start: run(start, start + stretch), starts))
-    return out
-
-
-@njit(cache=True, nogil=True, error_model="numpy", inline="always")
-def _z(value, i, sigma, kept, setting):  # type: ignore[no-untyped-def]
-    """How many sigma a pixel lies beyond its limit."""
-    measured, sign, limit = float(value[i]), setting[0], setting[1]
-    beyond = sign * (measured - limit)
-    variance = setting[2]
-    if sigma.size:
-        variance += float(sigma[i]) * float(sigma[i])
-    if kept.size:
-        variance += float(kept[i])
-    if beyond > 0.0 and measured < limit:
-        held = max(measured, 0.0)
-        variance += setting[3] * (limit - held) + setting[4] * (limit * limit - held * held)
-        if setting[5] != 0.0 and sigma.size and sigma[i] > 0.0:
-            share = limit / held
-            variance += float(sigma[i]) * float(sigma[i]) * (share * share - 1.0)
-    if variance == 0.0:
-        return np.inf if beyond > 0.0 else (-np.inf if beyond <= 0.0 else np.nan)
-    return beyond / math.sqrt(variance)
+    compiled(*columns, settings[0], settings[-1], out)
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def _loop(  # type: ignore[no-untyped-def]
     first, first_sigma, first_kept, second, second_sigma, second_kept, first_setting, second_setting, out
 ):
+    # a block's scores stay in the first-level cache; without branches the compiler makes vectors of them
+    z, variance = np.empty(_BLOCK), np.empty(_BLOCK)
     two = second.size > 0
-    for i in range(out.size):
-        z = _z(first, i, first_sigma, first_kept, first_setting)
+    for start in range(0, out.size, _BLOCK):
+        here = slice(start, min(start + _BLOCK, out.size))
+        scores = out[here]
+        _score(first[here], first_sigma[here], first_kept[here], first_setting, variance, scores)
         if two:
-            other = _z(second, i, second_sigma, second_kept, second_setting)
-            if other < z or math.isnan(other):
-                z = other
-        if z > -8.3:
-            out[i] = 0.5 * math.erfc(z / math.sqrt(2.0))
-        else:
-            out[i] = np.nan if math.isnan(z) else 1.0
+            _score(second[here], second_sigma[here], second_kept[here], second_setting, variance, z)
+            for i in range(scores.size):
+                scores[i] = z[i] if (z[i] < scores[i]) | (z[i] != z[i]) else scores[i]
+        for i in range(scores.size):
+            score = scores[i]
+            if score > -8.3:
+                scores[i] = 0.5 * math.erfc(score / math.sqrt(2.0))
+            else:
+                scores[i] = np.nan if math.isnan(score) else 1.0
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _score(value, sigma, kept, setting, variance, z):  # type: ignore[no-untyped-def]
+    """How many sigma each pixel lies beyond its limit; −∞ where it lies at the limit and nothing is uncertain."""
+    sign, limit, fixed, per_reflectance, per_square, in_proportion = setting
+    for i in range(value.size):
+        variance[i] = fixed
+    if sigma.size:
+        for i in range(value.size):
+            variance[i] += float(sigma[i]) * float(sigma[i])
+    if kept.size:
+        for i in range(value.size):
+            variance[i] += kept[i]
+    if in_proportion != 0.0 and sigma.size:
+        for i in range(value.size):
+            held = max(min(float(value[i]), limit), 0.0)
+            if sigma[i] > 0.0 and held < limit:
+                share = limit / held
+                variance[i] += float(sigma[i]) * float(sigma[i]) * (share * share - 1.0)
+    elif per_reflectance != 0.0 or per_square != 0.0:
+        for i in range(value.size):
+            held = max(min(float(value[i]), limit), 0.0)
+            variance[i] += per_reflectance * (limit - held) + per_square * (limit * limit - held * held)
+    for i in range(value.size):
+        beyond = sign * (float(value[i]) - limit)
+        score = beyond / math.sqrt(variance[i])
+        z[i] = -np.inf if (variance[i] == 0.0) & (beyond == 0.0) else score
 
 
 def flags_of(

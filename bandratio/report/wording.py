@@ -73,7 +73,8 @@ def _largest(row: Any) -> str:
     if "area_km2" in row.index:
         text += f", {row['area_km2']:.3g} km²"
     if "longitude" in row.index:
-        return f"{text}, at longitude {row['longitude']:.3f}°, latitude {row['latitude']:.3f}°"
+        text += f", at longitude {row['longitude']:.3f}°, latitude {row['latitude']:.3f}°"
+        return text
     return f"{text}, at {row['x']:.6g}, {row['y']:.6g}"
 
 
