@@ -78,8 +78,8 @@ def _largest(row: Any) -> str:
     return f"{text}, at {row['x']:.6g}, {row['y']:.6g}"
 
 
-def _short(text: Any, longest: int = 240) -> str:
-    text = str(text)
+def _short(told: Any, longest: int = 240) -> str:
+    text = str(told)
     return text if len(text) <= longest else text[:longest] + " …"
 
 
