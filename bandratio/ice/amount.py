@@ -139,9 +139,7 @@ def ice_fraction(
     results = scene.mapped(fitted, tuple(_NAMES), dict.fromkeys(_NAMES, np.float32))
     amount = xr.Dataset(
         {
-            name: scene.template.copy(data=values)
-            .rename(None)
-            .assign_attrs(long_name=_NAMES[name], units="1")
+            name: scene.labelled(values, {"long_name": _NAMES[name], "units": "1"})
             for name, values in results.items()
         }
     )

@@ -10,6 +10,7 @@ from numpy.typing import ArrayLike
 
 from .._checks import non_negative, one_of, open_fraction, positive
 from .decision import FLAG_MEANINGS, Decision
+from .judging import judged_scene
 from .materials import MaterialChoice, ice_free_ground, ice_materials
 from .scene import Scene
 
@@ -178,7 +179,7 @@ def ice_flags(
         gain_sigma=shared,
         opposition_ratio=opposition,
     )
-    flags = scene.judged(decision, rate, dependence)
+    flags = judged_scene(scene, decision, rate, dependence)
     flags.attrs |= {
         "red_nm": wavelengths[0],
         "infrared_nm": wavelengths[1],

@@ -1,43 +1,51 @@
-"""A scene's arrays, in memory or lazy: one pass to find the cut of the false discovery rule, then the flags."""
+"""A scene's arrays, in memory or lazy, on common dimensions, and functions of its points mapped over them."""
 
 from __future__ import annotations
 
-import os
-import tempfile
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Any, TypeAlias
+from typing import Any
 
 import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from ..detection.false_discovery import adjusted, adjusted_table, false_discovery_cut
-from ..detection.outside import BLOCK, Points, over_blocks
-from .decision import FLAG_MEANINGS, Decision, Judged
-from .materials import Materials
-from .sight import Sight, least_areal_fraction, reference_ground
+from ..detection.outside import Points, over_blocks
 
-__all__ = ["Scene"]
+__all__ = ["BlockPoints", "Scene"]
 
-Floats: TypeAlias = NDArray[np.float64]
 
-_NAMES = {
-    "ratio": "red/infrared albedo ratio",
-    "outside_sigma": "distance outside the ice-free hull in standard deviations",
-    "p_value": "probability that ice-free ground lies as far outside",
-    "q_value": "least false discovery rate at which this is a candidate",
-    "fraction_lower": "lower bound of the areal fraction of ice",
-    "fraction_upper": "upper bound of the areal fraction of ice",
-    "flag": "ice flag",
-}
-_DTYPES = {name: np.dtype(np.float32) for name in _NAMES} | {
-    "p_value": np.dtype(np.float64),
-    "q_value": np.dtype(np.float64),
-    "flag": np.dtype(np.int8),
-}
-_SPOOL_IN_MEMORY = 1 << 28  # bytes of p-values held in memory in a streamed pass, before they go to a file
+@dataclass(frozen=True)
+class BlockPoints:
+    """Makes the points of one block from its arrays; light, so that it can be sent to other processes.
+
+    Parameters
+    ----------
+    names : tuple of str
+        Names of the arrays that are not scalars, in their order.
+    scalars : dict
+        The others.
+    gain_sigma, opposition_ratio : float
+        As of the scene.
+    """
+
+    names: tuple[str, ...]
+    scalars: dict[str, Any]
+    gain_sigma: float
+    opposition_ratio: float
+
+    def arrays(self, parts: Sequence[NDArray]) -> dict[str, Any]:
+        """All arrays of the block by name."""
+        return self.scalars | dict(zip(self.names, parts, strict=True))
+
+    def __call__(self, parts: Sequence[NDArray]) -> Points:
+        """Points of the block."""
+        given = self.arrays(parts)
+        for name in ("red", "sigma_red", "covariance"):
+            given[name] = given[name] / self.opposition_ratio
+        albedos = [given.pop(name) for name in ("red", "infrared", "sigma_red", "sigma_infrared")]
+        return Points.of(*albedos, gain_sigma=self.gain_sigma, **given)
 
 
 @dataclass(frozen=True, eq=False)
@@ -76,57 +84,60 @@ class Scene:
         arrays = {name: _fitted(name, value, template) for name, value in values.items()}
         return cls(arrays, template, gain_sigma, opposition_ratio)
 
-    def points(self, arrays: Mapping[str, Any]) -> Points:
-        """Points of one block of the arrays."""
-        errors = {name: array for name, array in arrays.items() if name != "red"}
-        scale = self.opposition_ratio
-        errors["sigma_red"] = errors["sigma_red"] / scale
-        errors["covariance"] = errors["covariance"] / scale
-        infrared, sigma_red, sigma_infrared = (
-            errors.pop(name) for name in ("infrared", "sigma_red", "sigma_infrared")
-        )
-        return Points.of(
-            arrays["red"] / scale, infrared, sigma_red, sigma_infrared, gain_sigma=self.gain_sigma, **errors
-        )
+    @cached_property
+    def full(self) -> dict[str, Any]:
+        """The arrays that are not scalars."""
+        return {name: array for name, array in self.arrays.items() if np.ndim(array)}
 
-    def judged(self, decision: Decision, rate: float, dependence: Any) -> xr.Dataset:
-        """Flags and what leads to them; lazy where the arrays are."""
-        lazy = any(hasattr(array, "dask") for array in self.arrays.values())
-        judge = self._judged_lazily if lazy else self._judged_in_memory
-        results, cuts, noise = judge(decision, rate, dependence)
-        flags = xr.Dataset(
-            {
-                name: self.template.copy(data=data).rename(None).assign_attrs(_described(name))
-                for name, data in results.items()
-            }
-        )
-        flags.attrs = {
-            "Conventions": "CF-1.11",
-            "p_value_cut": cuts[1],
-            **{f"typical_{name}": value for name, value in noise.items()},
-            **self._sight(decision, noise),
-        }
-        return flags
+    @cached_property
+    def block_points(self) -> BlockPoints:
+        """What makes the points of one block."""
+        scalars = {name: array for name, array in self.arrays.items() if name not in self.full}
+        return BlockPoints(tuple(self.full), scalars, self.gain_sigma, self.opposition_ratio)
+
+    @cached_property
+    def _flat(self) -> list[NDArray]:
+        return [np.ravel(array) for array in self.full.values()]
+
+    def points(self, first: int, last: int) -> Points:
+        """Points of a scene in memory from `first` up to `last`."""
+        return self.block_points([array[first:last] for array in self._flat])
+
+    @cached_property
+    def chunked(self) -> list[Any]:
+        """The arrays that are not scalars as dask arrays of common chunks; none where nothing is lazy."""
+        lazy = [array for array in self.full.values() if hasattr(array, "dask")]
+        if not lazy:
+            return []
+        import dask.array as da
+
+        chunks = lazy[0].chunks
+        arrays = [
+            array if hasattr(array, "dask") else da.from_array(array, chunks) for array in self.full.values()
+        ]
+        pairs = (part for array in arrays for part in (array, range(array.ndim)))
+        return list(da.core.unify_chunks(*pairs)[1])
 
     def mapped(
         self, work: Callable[[Points], Any], names: Sequence[str], dtypes: Mapping[str, Any]
     ) -> dict[str, Any]:
         """Arrays of the scene's shape from a function of points that gives one row for each name."""
-        chunked = self._chunked()
-        if not chunked:
+        if not self.chunked:
             size = self.template.size
             results = {name: np.empty(size, dtype=dtypes[name]) for name in names}
 
             def fill(first: int, last: int) -> None:
-                for name, row in zip(names, work(self._block(first, last)), strict=True):
+                for name, row in zip(names, work(self.points(first, last)), strict=True):
                     results[name][first:last] = row
 
             over_blocks(fill, size)
             return {name: values.reshape(self.template.shape) for name, values in results.items()}
         import dask.array as da
 
+        chunked, points_of = self.chunked, self.block_points
+
         def rows(*parts: NDArray) -> NDArray[np.float64]:
-            return np.stack(work(self._from_parts(parts))).reshape(len(names), *parts[0].shape)
+            return np.stack(work(points_of(parts))).reshape(len(names), *parts[0].shape)
 
         stacked = da.map_blocks(
             rows, *chunked, dtype=np.float64, new_axis=0, chunks=((len(names),), *chunked[0].chunks),
@@ -134,184 +145,11 @@ class Scene:
         )  # fmt: skip
         return {name: stacked[i].astype(dtypes[name]) for i, name in enumerate(names)}
 
-    @cached_property
-    def _flat(self) -> dict[str, Any]:
-        return {name: np.ravel(array) if np.ndim(array) else array for name, array in self.arrays.items()}
-
-    def _block(self, first: int, last: int) -> Points:
-        return self.points(
-            {name: array[first:last] if np.ndim(array) else array for name, array in self._flat.items()}
-        )
-
-    def _from_parts(self, parts: tuple[NDArray, ...]) -> Points:
-        full = [name for name, array in self.arrays.items() if np.ndim(array)]
-        return self.points(self.arrays | dict(zip(full, parts, strict=True)))
-
-    def _chunked(self) -> list[Any]:
-        """The arrays that are not scalars as dask arrays of common chunks; none where nothing is lazy."""
-        full = [array for array in self.arrays.values() if np.ndim(array)]
-        lazy = [array for array in full if hasattr(array, "dask")]
-        if not lazy:
-            return []
-        import dask.array as da
-
-        chunked = [
-            array if hasattr(array, "dask") else da.from_array(array, chunks=lazy[0].chunks) for array in full
-        ]
-        return list(
-            da.core.unify_chunks(*(part for array in chunked for part in (array, range(array.ndim))))[1]
-        )
-
-    def _judged_in_memory(self, decision: Decision, rate: float, dependence: Any) -> tuple[Any, Any, Any]:
-        size = self.template.size
-        outside, p, p_outer = (np.empty(size) for _ in range(3))
-
-        def find(first: int, last: int) -> None:
-            outside[first:last], p[first:last], p_outer[first:last] = decision.p_values(
-                self._block(first, last)
-            )
-
-        over_blocks(find, size)
-        cut_outer = false_discovery_cut(p_outer, rate, dependence)
-        filtered = np.where(p_outer <= cut_outer, 1.0, p)
-        cut = false_discovery_cut(filtered, rate, dependence)
-        results = {name: np.empty(size, dtype=_DTYPES[name]) for name in Judged._fields}
-
-        def judge(first: int, last: int) -> None:
-            here = slice(first, last)
-            judged = decision.judged(
-                self._block(first, last), outside[here], p[here], p_outer[here], cut_outer, cut
-            )
-            for name, values in judged._asdict().items():
-                results[name][here] = values
-
-        over_blocks(judge, size)
-        results["q_value"] = adjusted(filtered, dependence)
-        shaped = {name: results[name].reshape(self.template.shape) for name in _NAMES}
-        return shaped, (cut_outer, cut), self._noise([_medians(self.arrays)])
-
-    def _judged_lazily(self, decision: Decision, rate: float, dependence: Any) -> tuple[Any, Any, Any]:
-        full = [name for name, array in self.arrays.items() if np.ndim(array)]
-
-        def tally(*parts: NDArray) -> tuple[Floats, int, Floats]:
-            _, p, p_outer = decision.p_values(self._from_parts(parts))
-            telling = (p < 1) | (p_outer <= rate)
-            told = np.column_stack([p[telling], p_outer[telling]])
-            medians = _medians(self.arrays | dict(zip(full, parts, strict=True)))
-            return told, int(np.sum(~np.isnan(p) & ~telling)), medians
-
-        with tempfile.SpooledTemporaryFile(max_size=_SPOOL_IN_MEMORY) as spool:
-            silent, medians = 0, []
-            for told, others, typical in _computed(tally, self._chunked()):
-                spool.write(told.tobytes())
-                silent += others
-                medians.append(typical)
-
-            def passed(outer_cut: float | None) -> Callable[[], Iterator[Floats]]:
-                def blocks() -> Iterator[Floats]:
-                    spool.seek(0)
-                    while data := spool.read(16 * BLOCK):
-                        p, p_outer = np.frombuffer(data).reshape(-1, 2).T
-                        yield p_outer if outer_cut is None else np.where(p_outer <= outer_cut, 1.0, p)
-                    for first in range(0, silent, BLOCK):
-                        yield np.ones(min(BLOCK, silent - first))
-
-                return blocks
-
-            cut_outer = false_discovery_cut(passed(None), rate, dependence)
-            cut = false_discovery_cut(passed(cut_outer), rate, dependence)
-            table = adjusted_table(passed(cut_outer), dependence)
-
-        def finish(points: Points) -> list[NDArray]:
-            judged = decision.judged(points, *decision.p_values(points), cut_outer, cut)._asdict()
-            q = table(judged["p_value"])
-            # the table's values are up to 0.2 % too large: keep them on the side that the decision was on
-            judged["q_value"] = np.where(judged["p_value"] <= cut, np.minimum(q, rate), q)
-            return [judged[name] for name in _NAMES]
-
-        return self.mapped(finish, tuple(_NAMES), _DTYPES), (cut_outer, cut), self._noise(medians)
-
-    def _noise(self, medians: list[Floats]) -> dict[str, float]:
-        """Typical errors and incidence of the scene."""
-        table = np.array(medians)
-        typical = {}
-        for column, name in enumerate(_TYPICAL):
-            known = table[~np.isnan(table[:, column]), column]
-            typical[name] = float(np.median(known)) if known.size else np.nan
-        return typical
-
-    def _sight(self, decision: Decision, typical: dict[str, float]) -> dict[str, Any]:
-        ground = decision.ground
-        if not isinstance(ground, Materials):
-            return {
-                "ice_free": f"one ratio, {ground:g}",
-                "ice": "not used with a lone ratio",
-                "least_areal_ice": np.nan,
-                "least_areal_ice_meaning": "not known where one ratio is all that is known of the ground",
-                "ice_free_ratio": ground,
-            }
-        incidence = typical.pop("incidence_deg")
-        at = None if np.isnan(incidence) else incidence
-        index = reference_ground(ground)
-        ices = decision.ice.reflectance(at)
-        coarsest = int(np.argmax(ices[:, 0] / ices[:, 1]))
-        scale = self.opposition_ratio
-        fraction = np.nan
-        if not np.isnan(typical["sigma_red"] + typical["sigma_infrared"]):
-            typical["sigma_red"] /= scale
-            fraction = float(
-                least_areal_fraction(
-                    decision.hulls, ground.reflectance(at)[index], ices[coarsest], **typical,
-                    gain_sigma=self.gain_sigma, incidence_deg=incidence,
-                )
-            )  # fmt: skip
-        sight = Sight(fraction, ground.names[index], decision.ice.names[coarsest])
-        return {
-            "ice_free": ground.summary,
-            "ice": decision.ice.summary,
-            "least_areal_ice": fraction,
-            "least_areal_ice_meaning": sight.sentence,
-            **_drawing(decision, incidence, ices),
-        }
-
-
-def _drawing(decision: Decision, incidence: float, ices: NDArray[np.float64]) -> dict[str, Any]:
-    """What a picture of the plane needs: corners of the ice-free hull and the ices, at the typical incidence."""
-    hulls = decision.hulls
-    corners = hulls.hulls[int(hulls.bins(np.array([incidence]))[0])].vertices
-    return {
-        "ice_free_hull_red": corners[:, 0],
-        "ice_free_hull_infrared": corners[:, 1],
-        "ice_red": ices[:, 0],
-        "ice_infrared": ices[:, 1],
-        "ice_names": ", ".join(decision.ice.names),
-    }
-
-
-_TYPICAL = ("sigma_red", "sigma_infrared", "relative_red", "relative_infrared", "incidence_deg")
-
-
-def _medians(arrays: Mapping[str, Any]) -> Floats:
-    """Median of the errors and of the incidence, of at most some thousand points spread over the block."""
-    medians = []
-    for name in _TYPICAL:
-        values = np.ravel(arrays[name])
-        values = values[:: max(1, values.size // 10_000)]
-        known = values[~np.isnan(values)]
-        medians.append(np.median(known) if known.size else np.nan)
-    return np.array(medians)
-
-
-def _computed(work: Callable[..., Any], arrays: list[Any]) -> Iterator[Any]:
-    """Results of `work` on every block, a few blocks at a time."""
-    import dask
-
-    blocks = zip(*(array.to_delayed().ravel() for array in arrays), strict=True)
-    task = dask.delayed(work, pure=False)  # type: ignore[attr-defined]
-    tasks = [task(*parts) for parts in blocks]
-    at_once = 4 * len(os.sched_getaffinity(0))
-    for first in range(0, len(tasks), at_once):
-        yield from dask.compute(*tasks[first : first + at_once])  # type: ignore[attr-defined,no-untyped-call]
+    def labelled(self, values: Any, attributes: Mapping[str, Any]) -> xr.DataArray:
+        """An array of the scene's shape with its coordinates."""
+        array = self.template.copy(data=values).rename(None)
+        array.attrs = dict(attributes)
+        return array
 
 
 def _labelled(values: Any) -> xr.DataArray:
@@ -354,13 +192,3 @@ def _number(name: str, array: Any) -> Any:
     if array.dtype.kind not in "fiu":
         raise TypeError(f"{name} must be real numbers, got {array.dtype}")
     return array
-
-
-def _described(name: str) -> dict[str, Any]:
-    if name == "flag":
-        return {
-            "long_name": _NAMES[name],
-            "flag_values": np.arange(len(FLAG_MEANINGS), dtype=np.int8),
-            "flag_meanings": " ".join(FLAG_MEANINGS),
-        }
-    return {"long_name": _NAMES[name], "units": "1"}

@@ -143,7 +143,7 @@ def test_lazy_arrays_give_the_same_flags_lazily(chunks):
 
 
 def test_a_lazy_scene_with_many_telling_values_spills_to_a_file(monkeypatch):
-    from bandratio.ice import scene as room
+    from bandratio.ice import judging as room
 
     monkeypatch.setattr(room, "_SPOOL_IN_MEMORY", 1000)
     measured = scene()
