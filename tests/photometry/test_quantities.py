@@ -50,7 +50,7 @@ def test_conversions_agree_with_the_scattering_model(quantity):
 @given(i=st.floats(0, 85), first=st.sampled_from(CONVERTIBLE), second=st.sampled_from(CONVERTIBLE))
 def test_there_and_back(i, first, second):
     cube = _cube(first)
-    incidence = i if i > 2 else 0.0
+    incidence = i if i > 4 else 0.0  # smaller ones are taken for radians
     back = br.convert_quantity(
         br.convert_quantity(cube, second, incidence=incidence), first, incidence=incidence
     )
