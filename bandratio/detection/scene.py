@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from .._checks import open_fraction, suggestion
 from .threshold import Threshold
 
 __all__ = ["scene_threshold"]
 
-_BINS = 4096
+_BINS = 65_536
+#: How many values are held in memory at most, of a lazy map.
+_HELD = 4_000_000
 
 
 def scene_threshold(maps: xr.Dataset, name: str, quantile: float) -> Threshold:
@@ -60,7 +64,7 @@ def scene_threshold(maps: xr.Dataset, name: str, quantile: float) -> Threshold:
         raise ValueError(f"the maps hold no {name!r}{suggestion(name, parameters)}")
     share = open_fraction("quantile", quantile)
     values = maps[name]
-    count = int(values.notnull().sum())
+    count, *ends = _count_and_ends(values.data)
     if count == 0:
         raise ValueError(f"{name} has no finite value in these maps; check the cube with check_cube")
     spread = float(np.sqrt(share * (1 - share) / count))
@@ -68,7 +72,7 @@ def scene_threshold(maps: xr.Dataset, name: str, quantile: float) -> Threshold:
         int(np.clip(np.ceil(level * (count - 1)), 0, count - 1))
         for level in (share - spread, share, share + spread)
     ]
-    low, middle, high = _order_statistics(values.data, ranks)
+    low, middle, high = _order_statistics(values.data, ranks, ends)
     shoulder = values.attrs.get("shoulder")
     return Threshold(
         middle,
@@ -80,38 +84,93 @@ def scene_threshold(maps: xr.Dataset, name: str, quantile: float) -> Threshold:
     )
 
 
-def _order_statistics(values: Any, ranks: list[int]) -> list[float]:
-    """Values at the given ranks (0 is the smallest) of the finite ones; lazy arrays are streamed.
-
-    A lazy array is counted into a histogram, then only the values of the bins that hold a wanted rank are kept;
-    where one of those bins is still crowded it is divided again.
-    """
+def _of_each_block(values: Any, function: Callable[..., Any], *arguments: Any) -> list[Any]:
+    """What a function of an array gives for each block of a lazy array, or for an array in memory: one reading."""
     if not hasattr(values, "dask"):
-        finite = np.asarray(values, dtype=float)
-        finite = finite[np.isfinite(finite)]
-        found = np.partition(finite, sorted(set(ranks)))
-        return [float(found[rank]) for rank in ranks]
-    return [_lazy_order_statistic(values, rank) for rank in ranks]
+        return [function(np.asarray(values), *arguments)]
+    import dask
+
+    tools: Any = dask
+    once = tools.delayed(function)
+    return list(tools.compute(*(once(block, *arguments) for block in values.to_delayed().ravel())))
 
 
-def _lazy_order_statistic(values: Any, rank: int, held: int = 1_000_000) -> float:
-    import dask.array as da
+def _finite(block: NDArray) -> NDArray[np.float64]:
+    numbers: NDArray[np.float64] = block.astype(float).ravel()
+    return numbers[np.isfinite(numbers)]
 
-    histogram: Any = da.histogram
-    blocks = values.ravel().astype(float)
-    finite = da.where(da.isfinite(blocks), blocks, np.nan)
-    low, high = (float(edge) for edge in da.stack([da.nanmin(finite), da.nanmax(finite)]).compute())
-    below = 0
-    while True:
-        edges = np.linspace(low, high, _BINS + 1)
-        if low == high or not (np.diff(edges) > 0).all():
-            return low
-        counts = histogram(blocks[da.isfinite(blocks)], bins=edges)[0].compute()
-        cumulative = below + np.cumsum(counts)
-        chosen = int(np.searchsorted(cumulative, rank, side="right"))
-        inside, below = int(counts[chosen]), int(cumulative[chosen] - counts[chosen])
-        low, high = float(edges[chosen]), float(edges[chosen + 1])
-        if inside <= held:
-            last = chosen == _BINS - 1
-            kept = blocks[(blocks >= low) & ((blocks <= high) if last else (blocks < high))].compute()
-            return float(np.partition(kept, rank - below)[rank - below])
+
+def _ends_of(block: NDArray) -> tuple[int, float, float]:
+    numbers = _finite(block)
+    return numbers.size, float(numbers.min(initial=np.inf)), float(numbers.max(initial=-np.inf))
+
+
+def _counts_of(block: NDArray, edges: NDArray) -> NDArray[np.int64]:
+    return np.histogram(_finite(block), bins=edges)[0]
+
+
+def _kept_of(block: NDArray, ranges: list[tuple[float, float]]) -> NDArray[np.float64]:
+    numbers = _finite(block)
+    return numbers[np.any([(numbers >= low) & (numbers <= high) for low, high in ranges], axis=0)]
+
+
+def _equal_to(block: NDArray, wanted: list[float]) -> NDArray[np.int64]:
+    numbers = _finite(block)
+    return np.array([np.count_nonzero(numbers == value) for value in wanted])
+
+
+def _count_and_ends(values: Any) -> tuple[int, float, float]:
+    """Number of finite values, the smallest and the largest."""
+    counts, least, most = zip(*_of_each_block(values, _ends_of), strict=True)
+    return sum(counts), min(least), max(most)
+
+
+def _order_statistics(values: Any, ranks: list[int], ends: list[float]) -> list[float]:
+    """Values at the given ranks (0 is the smallest) of the finite ones.
+
+    They are counted into a histogram in one reading, and in a second one only the values of those bins are kept that
+    hold a wanted rank. Where these are still crowded, they are divided again first.
+    """
+    #: for each rank the bin that holds it: its edges, the values in it, and those below it
+    bins = [(ends[0], ends[1], np.inf, 0)] * len(ranks)
+    while sum(inside for _, _, inside, _ in set(bins)) > _HELD:
+        edges = np.unique(
+            np.concatenate([np.linspace(low, high, _BINS + 1) for low, high, _, _ in set(bins)])
+        )
+        narrow = [np.count_nonzero((edges >= low) & (edges <= high)) < 3 for low, high, _, _ in bins]
+        if all(narrow):  # one value many times: a bin holds its two edges and nothing between
+            at_low = sum(_of_each_block(values, _equal_to, [low for low, _, _, _ in bins]))
+            return [
+                low if rank - below < count else high
+                for rank, count, (low, high, _, below) in zip(ranks, at_low, bins, strict=True)
+            ]
+        counts = sum(_of_each_block(values, _counts_of, edges))
+        bins = [
+            each if stop else _bin_of(rank, each, edges, counts)
+            for rank, each, stop in zip(ranks, bins, narrow, strict=True)
+        ]
+    ranges = [(low, high) for low, high, _, _ in set(bins)]
+    kept = np.sort(np.concatenate(_of_each_block(values, _kept_of, ranges)))
+    found = []
+    for rank, (low, high, _, below) in zip(ranks, bins, strict=True):
+        own = kept[(kept >= low) & (kept <= high)]
+        found.append(float(own[rank - below]))
+    return found
+
+
+def _bin_of(
+    rank: int, outer: tuple[float, float, float, int], edges: NDArray, counts: NDArray
+) -> tuple[float, float, float, int]:
+    """The finer bin within `outer` that holds a rank."""
+    low, high, _, below = outer
+    first, last = np.searchsorted(edges, low), np.searchsorted(edges, high)
+    cumulative = below + np.cumsum(counts[first:last])
+    place = int(np.searchsorted(cumulative, rank, side="right"))
+    place = min(place, cumulative.size - 1)
+    inside = int(counts[first + place])
+    return (
+        float(edges[first + place]),
+        float(edges[first + place + 1]),
+        inside,
+        int(cumulative[place]) - inside,
+    )

@@ -117,7 +117,10 @@ def test_it_can_be_told_and_read_back():
 
 @pytest.mark.parametrize("quantile", [0.001, 0.25, 0.5, 0.99, 0.9999])
 @pytest.mark.parametrize("shape", ["normal", "ties", "tail"])
-def test_lazy_and_eager_quantiles_are_the_same(quantile, shape):
+@pytest.mark.parametrize("held", [4_000_000, 20])
+def test_lazy_and_eager_quantiles_are_the_same(quantile, shape, held, monkeypatch):
+    monkeypatch.setattr("bandratio.detection.scene._HELD", held)
+    monkeypatch.setattr("bandratio.detection.scene._BINS", 65_536 if held > 1000 else 8)
     generator = np.random.default_rng(3)
     draw = {
         "normal": lambda: generator.normal(size=(80, 90)),
@@ -131,6 +134,20 @@ def test_lazy_and_eager_quantiles_are_the_same(quantile, shape):
     expected = np.quantile(values[np.isfinite(values)], quantile, method="higher")
     assert br.scene_threshold(eager, "p", quantile).value == expected
     assert br.scene_threshold(lazy, "p", quantile) == br.scene_threshold(eager, "p", quantile)
+
+
+def test_a_lazy_map_is_read_three_times():
+    """Once for the ends, once to count, once to keep what is near the quantile: maps are computed anew each time."""
+    reads = []
+
+    def block(values):
+        reads.append(values.size)
+        return values
+
+    values = np.random.default_rng(5).normal(size=(40, 50))
+    lazy = da.from_array(values, chunks=(40, 50)).map_blocks(block, dtype=float, meta=np.empty((0, 0)))
+    br.scene_threshold(xr.Dataset({"p": (("y", "x"), lazy)}), "p", 0.9)
+    assert len(reads) == 3
 
 
 def test_its_sigma_is_the_sampling_error_of_the_quantile():
