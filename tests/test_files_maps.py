@@ -297,9 +297,9 @@ def test_beside_leaves_nothing_after_an_error(tmp_path):
 )
 def test_streamed_percentiles_keep_their_bound(values, percent):
     """Against numpy's order statistics: no further than the stated bound from the two that enclose the rank."""
-    counts = BinCounts.of(values[: len(values) // 2])
-    bins, n = BinCounts.of(values[len(values) // 2 :]).sparse()
-    counts.add(bins, n, int(np.isnan(values[len(values) // 2 :]).sum()))
+    counts = BinCounts.total(
+        [BinCounts.of(values[: len(values) // 2]), BinCounts.of(values[len(values) // 2 :])]
+    )
     good = values[np.isfinite(values)].astype(float)
     assert counts.valid == good.size
     assert counts.missing == values.size - good.size

@@ -57,7 +57,7 @@ def scheduled(address: str | None, workers: int | None) -> Iterator[None]:
     from distributed import Client
 
     try:
-        client = Client(address, timeout="10s")
+        client = Client(address, timeout="5s")
     except (OSError, ValueError, ImportError) as error:
         raise OSError(
             f"no dask scheduler answers at {address} ({' '.join(str(error).split())}); start one with "

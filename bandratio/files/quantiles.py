@@ -8,7 +8,8 @@ idea of a relative error that holds for every quantile is that of Masson, Rim & 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import threading
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,6 +19,7 @@ from numpy.typing import NDArray
 __all__ = ["RELATIVE_ERROR", "BinCounts"]
 
 _BINS = 1 << (32 - 14)
+_kept = threading.local()
 #: Largest relative error of a percentile.
 RELATIVE_ERROR = 1 / 512
 
@@ -26,6 +28,13 @@ RELATIVE_ERROR = 1 / 512
 class BinCounts:
     """How many values fell into each bin, and how many were missing.
 
+    Parameters
+    ----------
+    bins, counts : ndarray of uint32, shape (filled bin,)
+        The bins that hold something, in ascending order, and what they hold.
+    missing : int
+        How many values were NaN or infinite.
+
     Examples
     --------
     >>> counts = BinCounts.of(np.linspace(0, 1, 100_001, dtype=np.float32))
@@ -33,49 +42,49 @@ class BinCounts:
     0.5
     """
 
-    counts: NDArray[np.int64]
+    bins: NDArray
+    counts: NDArray
     missing: int = 0
-
-    @classmethod
-    def none(cls) -> BinCounts:
-        """Nothing counted yet."""
-        return cls(np.zeros(_BINS, np.int64))
 
     @classmethod
     def of(cls, values: NDArray) -> BinCounts:
         """Counts of an array of any shape; NaN and infinity are missing."""
-        empty = cls.none()
         bits = np.ascontiguousarray(values, dtype=np.float32).reshape(-1).view(np.uint32)
-        empty.missing = int(_count(bits, empty.counts))
-        return empty
+        # the table is kept for the thread's next array: fresh memory costs as much as the counting
+        if not hasattr(_kept, "table"):
+            _kept.table = np.zeros(_BINS, np.uint32)
+        filled, missing = _count(bits, _kept.table)
+        bins, counts = np.empty(filled, np.uint32), np.empty(filled, np.uint32)
+        _take(_kept.table, bins, counts)
+        return cls(bins, counts, int(missing))
+
+    @classmethod
+    def total(cls, parts: Iterable[BinCounts]) -> BinCounts:
+        """Counts of all blocks together."""
+        table, missing = np.zeros(_BINS, np.int64), 0
+        for part in parts:
+            table[part.bins] += part.counts
+            missing += part.missing
+        bins = np.flatnonzero(table)
+        return cls(bins, table[bins], missing)
 
     @property
     def valid(self) -> int:
         """Number of values that were not missing."""
         return int(self.counts.sum())
 
-    def sparse(self) -> tuple[NDArray[np.uint32], NDArray[np.uint32]]:
-        """Bins that hold something, and what they hold."""
-        filled = np.flatnonzero(self.counts)
-        return filled.astype(np.uint32), self.counts[filled].astype(np.uint32)
-
-    def add(self, bins: NDArray, counts: NDArray, missing: int) -> None:
-        """Add the counts of another block."""
-        self.counts[bins] += counts
-        self.missing += missing
-
     def percentiles(self, percents: Sequence[float]) -> list[float]:
         """Percentiles, each within `RELATIVE_ERROR` of an order statistic; NaN where all is missing."""
         total = self.valid
         if total == 0:
             return [float("nan")] * len(percents)
-        reached = np.cumsum(self.counts)
+        reached = np.cumsum(self.counts, dtype=np.int64)
         found = []
         for percent in percents:
             rank = percent / 100 * (total - 1)
             k = int(np.searchsorted(reached, rank, side="right"))
-            low, high = _edges(k)
-            within = (rank - (reached[k] - self.counts[k]) + 0.5) / self.counts[k]
+            low, high = _edges(int(self.bins[k]))
+            within = (rank - (reached[k] - int(self.counts[k])) + 0.5) / int(self.counts[k])
             found.append(float(low + (high - low) * min(max(within, 0.0), 1.0)))
         return found
 
@@ -90,8 +99,9 @@ def _edges(k: int) -> tuple[float, float]:
 
 
 @njit(cache=True, nogil=True)
-def _count(bits, counts):  # type: ignore[no-untyped-def]
-    missing = 0
+def _count(bits, table):  # type: ignore[no-untyped-def]
+    """Count into an empty table; how many bins were filled, and how many values were missing."""
+    missing = filled = 0
     for i in range(bits.size):
         b = bits[i]
         if (b & np.uint32(0x7FFFFFFF)) >= np.uint32(0x7F800000):
@@ -99,5 +109,20 @@ def _count(bits, counts):  # type: ignore[no-untyped-def]
             continue
         # negative numbers come before positive ones, the largest magnitude first
         ordered = ~b if b >> np.uint32(31) else b | np.uint32(0x80000000)
-        counts[ordered >> np.uint32(14)] += 1
-    return missing
+        k = ordered >> np.uint32(14)
+        before = table[k]
+        filled += before == 0
+        table[k] = before + np.uint32(1)
+    return filled, missing
+
+
+@njit(cache=True, nogil=True)
+def _take(table, bins, counts):  # type: ignore[no-untyped-def]
+    """Move what a table holds into the two lists, and leave it empty."""
+    at = 0
+    for k in range(table.size):
+        if table[k]:
+            bins[at] = k
+            counts[at] = table[k]
+            table[k] = 0
+            at += 1

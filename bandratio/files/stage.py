@@ -10,7 +10,7 @@ import fcntl
 import json
 import os
 import shutil
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -128,25 +128,27 @@ class Stage:
         return {
             tuple(int(word) for word in marker.stem.split("-"))
             for marker in self.done.iterdir()
-            if marker.suffix == ".npz"
+            if marker.suffix == ".npy"
         }
 
     def count_finished(self) -> int:
         """Number of blocks that are whole."""
         try:
-            return sum(marker.suffix == ".npz" for marker in self.done.iterdir())
+            return sum(marker.suffix == ".npy" for marker in self.done.iterdir())
         except FileNotFoundError:
             return 0
 
-    def counts(self) -> dict[str, BinCounts]:
-        """Counts of every variable, added up over all finished blocks."""
-        total: dict[str, BinCounts] = {}
-        for file in self.done.glob("*.npz"):
-            with np.load(file) as marker:
-                for name, missing in zip(marker["names"].tolist(), marker["missing"].tolist(), strict=True):
-                    counts = total.setdefault(name, BinCounts.none())
-                    counts.add(marker[f"bins/{name}"], marker[f"counts/{name}"], missing)
-        return total
+    def counts(self, names: Sequence[str]) -> dict[str, BinCounts]:
+        """Counts of the named variables, those that were counted, added up over all finished blocks."""
+        parts: dict[str, list[BinCounts]] = {name: [] for name in names}
+        for file in self.done.glob("*.npy"):
+            marker, at = np.load(file), 0
+            for of_variable in parts.values():
+                missing, bins = int(marker[at]), int(marker[at + 1])
+                middle, end = at + 2 + bins, at + 2 + 2 * bins
+                of_variable.append(BinCounts(marker[at + 2 : middle], marker[middle:end], missing))
+                at = end
+        return {name: BinCounts.total(of_variable) for name, of_variable in parts.items()}
 
 
 def _different(before: Any, now: Any) -> tuple[str, str]:
@@ -163,16 +165,14 @@ def _different(before: Any, now: Any) -> tuple[str, str]:
     return texts[0], texts[1]
 
 
-def write_marker(folder: Path, block: tuple[int, ...], counts: Mapping[str, BinCounts]) -> None:
-    """Mark a block as whole, with the counts of its values."""
-    arrays: dict[str, NDArray] = {
-        "names": np.array(list(counts), dtype=str),
-        "missing": np.array([c.missing for c in counts.values()], dtype=np.int64),
-    }
-    for name, of_variable in counts.items():
-        arrays[f"bins/{name}"], arrays[f"counts/{name}"] = of_variable.sparse()
+def write_marker(folder: Path, block: tuple[int, ...], counts: Iterable[BinCounts]) -> None:
+    """Mark a block as whole, with the counts of its values, those of each variable after the other."""
+    pieces: list[NDArray] = []
+    for of_variable in counts:
+        pieces += [np.array([of_variable.missing, of_variable.bins.size], np.uint32)]
+        pieces += [of_variable.bins, of_variable.counts]
     place = "-".join(str(k) for k in block)
     unfinished = folder / f"{place}.{os.getpid()}.new"
     with unfinished.open("wb") as stream:
-        np.savez(stream, **arrays)  # type: ignore[arg-type]
-    unfinished.replace(folder / f"{place}.npz")
+        np.save(stream, np.concatenate([*pieces, np.empty(0, np.uint32)]))
+    unfinished.replace(folder / f"{place}.npy")

@@ -91,7 +91,8 @@ def stream_maps(
                     write_template(layout, stage.store)
                     stage.begin(job)
             _write_blocks(layout, stage, job, progress)
-            counts = stage.counts()
+            counted = [name for name in layout.gridded if layout.maps[name].dtype.kind == "f"]
+            counts = stage.counts(counted)
             _finish(layout, stage, finish, overwrite or stage.moving.is_file())
         stage.remove()
     finally:
@@ -173,7 +174,32 @@ def _write_blocks(layout: Layout, stage: Stage, job: dict[str, Any], progress: P
     )
     keys = [(written.name, *place) for place in todo]
     with _watched(stage, len(finished) + len(todo), progress):
-        compute_as_if_collection(da.Array, written.__dask_graph__(), keys)
+        compute_as_if_collection(_blocks(), written.__dask_graph__(), keys)
+
+
+@functools.cache
+def _blocks() -> Any:
+    """What dask takes for the collection that is computed: an array, whose planes are not copied to be written.
+
+    Where a slice is less than half of its block, dask copies it, so that the block may be freed. Here a block's
+    planes are written together and freed together.
+    """
+    import operator
+
+    import dask.array as da
+    from dask._task_spec import Task
+    from dask.array.chunk import getitem
+
+    class Blocks(da.Array):
+        @staticmethod
+        def __dask_optimize__(graph: Any, keys: Any, **options: Any) -> Any:
+            graph = dict(da.optimization.optimize(graph, keys, **options))
+            for key, task in graph.items():
+                if isinstance(task, Task) and task.func is getitem:
+                    graph[key] = Task(key, operator.getitem, *task.args)
+            return graph
+
+    return Blocks
 
 
 @contextmanager
@@ -203,8 +229,11 @@ def _watched(stage: Stage, total: int, progress: Progress | None) -> Iterator[No
 def _arrays(store: str, token: str) -> Any:  # noqa: ARG001 (another job has another layout)
     import zarr
 
-    group = zarr.open_group(store, mode="r+", use_consolidated=False)
-    return functools.lru_cache(maxsize=None)(group.__getitem__)
+    # whether a block holds nothing is known from its counts, so that zarr need not compare every value
+    def array_of(name: str) -> Any:
+        return zarr.open_array(store, path=name, mode="r+", config={"write_empty_chunks": True})
+
+    return functools.lru_cache(maxsize=None)(array_of)
 
 
 def _write_block(*blocks: NDArray, writer: _Writer, block_id: tuple[int, ...] | None = None) -> NDArray:
@@ -212,19 +241,21 @@ def _write_block(*blocks: NDArray, writer: _Writer, block_id: tuple[int, ...] | 
     bounds = [(edges[k], edges[k + 1]) for edges, k in zip(writer.starts, block_id, strict=True)]
     names = ("rows", "columns") if len(bounds) == 2 else tuple(f"axis {k}" for k in range(len(bounds)))
     told = ", ".join(f"{name} {low}–{high - 1}" for name, (low, high) in zip(names, bounds, strict=True))
-    counts: dict[str, BinCounts] = {}
+    counts: list[BinCounts] = []
     with _named(writer.path, f"the block of {told}"):
         array_of = _arrays(writer.store, writer.token)
         for name, block in zip(writer.names, blocks, strict=True):
-            array_of(name)[tuple(slice(low, high) for low, high in bounds)] = block
+            where = tuple(slice(low, high) for low, high in bounds)
             if block.dtype.kind == "f":
-                counts[name] = BinCounts.of(block)
+                counts.append(BinCounts.of(block))
+            if block.dtype.kind != "f" or counts[-1].missing < block.size:
+                array_of(name)[where] = block
             coarse = block
             for level in range(1, writer.levels + 1):
                 coarse = halved(coarse)
                 at = [low >> level for low, _ in bounds]
-                where = tuple(slice(low, low + size) for low, size in zip(at, coarse.shape, strict=True))
-                array_of(f"overviews/{level}/{name}")[where] = coarse
+                part = tuple(slice(low, low + size) for low, size in zip(at, coarse.shape, strict=True))
+                array_of(f"overviews/{level}/{name}")[part] = coarse
         write_marker(Path(writer.done), block_id, counts)
     return np.zeros((1,) * len(bounds), np.int8)
 
