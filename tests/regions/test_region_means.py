@@ -247,7 +247,7 @@ def _boxes(**options):
         (
             lambda: br.region_means(_cube(), br.Noise(shared_within=np.zeros((3, 3), int)), two_regions()),
             ValueError,
-            "noise.shared_within has the shape (3, 3)",
+            "shared_within has the shape (3, 3)",
         ),
         (lambda: br.region_means(_cube(), None, _boxes(crs="EPSG:4326")), ValueError, "and the cube has none"),
         (
