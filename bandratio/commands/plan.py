@@ -39,8 +39,8 @@ _UNWANTED = click.option(
 
 
 @command.command(
-    epilog="Example: bandratio plan bands --wavelengths 415,480,600,700,750,830,900,950,1000 --size 4 --wanted "
-    "olivine,low-calcium pyroxene --unwanted plagioclase,opaque --relative 0.01"
+    epilog="Example: bandratio plan bands --wavelengths 415,480,600,700,750,830,900,950,1000 --size 4 "
+    "--wanted olivine,basalt --unwanted plagioclase,opaque --relative 0.01"
 )
 @click.option("--wavelengths", required=True, metavar="NM,NM,…", help="Candidate band centres [nm].")
 @click.option("--size", required=True, type=int, help="How many bands the camera may have.")

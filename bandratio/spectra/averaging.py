@@ -57,8 +57,8 @@ def band_average(
     Raises
     ------
     ValueError
-        If wavelengths do not ascend or look like µm, both or neither description of the bands is given in a
-        contradicting way, or a sample's channels are wider than a band.
+        If wavelengths do not ascend or look like µm, widths and responses are both given, or a sample's channels are
+        wider than a band.
 
     See Also
     --------
