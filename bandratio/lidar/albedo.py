@@ -70,7 +70,7 @@ def albedo_from_returns(
         scales with this albedo alone; ``_per_count`` is the albedo of one count; ``_limit`` is the albedo that the shot's dropout would lie below, NaN where
         the return is missing or saturated for another reason; ``_quality``; ``_live_fraction`` of a counter with a dead
         time, by which its counts were divided. ``covariance``: random covariance of the
-        two albedos (range and incidence are one for both). Attributes: ``gain_sigma``, the shared error of the
+        two albedos (range and incidence are one for both); ``covariance_shared``: that of the shared errors. Attributes: ``gain_sigma``, the shared error of the
         red over infrared gain [fraction].
 
     Raises
@@ -123,6 +123,11 @@ def albedo_from_returns(
     covariance = signs * variables["red_sigma_common"] * variables["infrared_sigma_common"]
     variables["covariance"] = covariance.assign_attrs(
         long_name="random covariance of the red and the infrared albedo", units="1"
+    )
+    shared = variables["red_sigma_shared"] * variables["infrared_sigma_shared"] * calibration.correlation
+    variables["covariance_shared"] = shared.assign_attrs(
+        long_name="covariance of the red and the infrared albedo by the errors that all shots share",
+        units="1",
     )
     if known:
         variables["incidence_deg"] = incidence.assign_attrs(long_name="incidence", units="degree")

@@ -109,6 +109,8 @@ def grid_returns(albedos: xr.Dataset, like: xr.DataArray | xr.Dataset, *, pool: 
         coords={"y": like["y"], "x": like["x"], "quantity": "zero_phase_albedo"},
         attrs={**albedos.attrs, "pool": int(pool), "n_outside": outside, "n_left_out": left_out},
     )
+    shared = grid["red_sigma_shared"] * grid["infrared_sigma_shared"]
+    grid["covariance_shared"] = shared * albedos.attrs.get("gain_correlation", 0.0)
     if "spatial_ref" in like.coords:
         grid = grid.assign_coords(spatial_ref=like["spatial_ref"])
     return _described(grid, albedos)

@@ -61,6 +61,21 @@ def test_calibrated_albedo_recovers_a_known_surface():
         assert abs(mean - truth) < 3.5 * sigma
 
 
+def test_ratio_knows_what_both_channels_share():
+    # an error of 10 % common to both constants cancels in the ratio: its sigma is that of the counts
+    rng = np.random.default_rng(6)
+    calibration = br.calibrate_lidar(_shots(rng, 2000, (0.5, 0.3)), (0.99, 0.98), common_sigma=0.1)
+    albedos = br.albedo_from_returns(_shots(rng, 500, (0.5, 0.3), reflectance=(0.16, 0.27)), calibration)
+    pair = (albedos["red"], albedos["infrared"], albedos["red_sigma"], albedos["infrared_sigma"])
+    alone = br.lidar_ratio(*pair)
+    together = br.lidar_ratio(*pair, covariance=albedos["covariance"] + albedos["covariance_shared"])
+    assert float(alone["ratio_sigma"].median()) > 1.3 * 0.1 * float(alone["ratio"].median())
+    calm = float(together["ratio_sigma"].median())
+    assert calm < 0.03
+    shared = float((albedos["covariance_shared"] / albedos["red"] / albedos["infrared"]).mean())
+    assert shared == pytest.approx(0.1**2, rel=0.01)
+
+
 def test_common_error_of_the_setup_cancels_in_the_gain():
     returns = _shots(np.random.default_rng(1), 50, (0.5, 0.3))
     plain = br.calibrate_lidar(returns, (0.99, 0.98))
