@@ -110,6 +110,7 @@ def evaluate(
     parts: bool = False,
     threads: int = 1,
     out: NDArray | None = None,
+    offset: int = 0,
 ) -> NDArray:
     """Values and standard uncertainties of many ratios.
 
@@ -134,6 +135,8 @@ def evaluate(
         How many threads share the pixels.
     out : ndarray, shape (ratio, 1, 2 or 4, pixel), optional
         Where to write; the planes are value, sigma, and with parts random and shared sigma.
+    offset : int
+        From which pixel of `out` on.
 
     Returns
     -------
@@ -162,7 +165,7 @@ def evaluate(
         part_map = np.ascontiguousarray(per_pixel[:, start:stop], dtype=part.dtype) if has_map else per_pixel
         part_gain = np.ascontiguousarray(gain[start:stop], dtype=part.dtype)
         part_factor = np.ascontiguousarray(factor[:, start:stop], dtype=part.dtype) if has_factor else factor
-        _loop(part, *fixed, has_map, part_map, part_gain, part_factor, out, start)
+        _loop(part, *fixed, has_map, part_map, part_gain, part_factor, out, offset + start)
 
     threads = max(1, min(threads, pixels // _THREAD_PIXELS))
     if threads == 1 and reflectance.flags.c_contiguous:

@@ -18,6 +18,7 @@ from .ratio import BandRatio
 
 if TYPE_CHECKING:
     from .kernel import NoiseTable, RatioTable
+    from .photometry.plan import Plan
 
 __all__ = ["PARTS", "map_attributes", "parameters"]
 
@@ -35,6 +36,7 @@ def parameters(
     noise: Noise | None = None,
     names: Sequence[str | BandRatio] | Mapping[str, BandRatio] | str | BandRatio | None = None,
     *,
+    geometry: Mapping[str, Any] | xr.Dataset | None = None,
     tolerance: float = TOLERANCE_NM,
     parts: bool = False,
 ) -> xr.Dataset:
@@ -49,6 +51,9 @@ def parameters(
     names : sequence of str and BandRatio, or mapping of str to BandRatio, optional
         Which parameters; None gives every parameter of the catalogue that the bands allow and says in the
         attribute `left_out` which it left out and why. In a list, a missing band is an error.
+    geometry : mapping or Dataset, optional
+        Arguments of `normalise`, as ``{"incidence": …, "emission": …, "phase": …, "law": …}`` or what `terrain_geometry`
+        gives: the maps are those of the normalised cube, made in the same pass over memory.
     tolerance : float
         Largest distance between a nominal wavelength and a band's centre [nm].
     parts : bool
@@ -76,6 +81,12 @@ def parameters(
     11.17 ± 0.88 % per 100 nm
     """
     cube = require_cube(cube)
+    made = None if geometry is None else _plan(cube, geometry)
+    if made is not None and (made.lazy or not made.linear or not _known_per_band(cube, noise)):
+        from .photometry import normalise
+
+        # lazy blocks are normalised and mapped one after the other anyway; the rest does not fit the single pass
+        cube, made = normalise(cube, **_arguments(geometry)), None
     if noise is not None and not isinstance(noise, Noise):
         raise TypeError(f"noise must be a br.Noise, got {type(noise).__name__}; br.Noise(random={noise!r})?")
     if parts and noise is None:
@@ -95,7 +106,10 @@ def parameters(
                 "coordinate"
             )
 
-    planes = _planes(cube, noise, list(ratios.values()), centres, tolerance, parts)
+    if made is None:
+        planes = _planes(cube, noise, list(ratios.values()), centres, tolerance, parts)
+    else:
+        planes, cube = _in_one_pass(made, noise, list(ratios.values()), centres, tolerance, parts)
     dims = tuple(dim for dim in cube.dims if dim != "wavelength")
     coords = {name: c for name, c in cube.coords.items() if "wavelength" not in c.dims}
     # where the map projection stands under another name than spatial_ref, every map must say so
@@ -113,6 +127,8 @@ def parameters(
     attributes["wavelengths"] = ", ".join(f"{centre:g}" for centre in centres) + " nm"
     attributes["noise"] = noise.describe() if noise is not None else "none given"
     carried = [name for name in ("pixel_gain", "brightness_factor") if name in cube.coords]
+    if made is not None:
+        carried = ["pixel_gain"] * made.correction.has_sigma + ["brightness_factor"]
     if noise is not None and carried:
         attributes["noise_of_the_cube"] = f"{' and '.join(carried)} of the cube enter the sigmas"
     attributes["left_out"] = "; ".join(f"{name}: {reason}" for name, reason in left_out.items())
@@ -137,6 +153,69 @@ def _version() -> str:
     from . import __version__
 
     return __version__
+
+
+def _arguments(geometry: Any) -> dict[str, Any]:
+    if not isinstance(geometry, Mapping):
+        raise TypeError(
+            "geometry is a mapping of normalise's arguments, {'incidence': …, 'emission': …, 'phase': …}, or what "
+            f"terrain_geometry gives, got {type(geometry).__name__}"
+        )
+    missing = [name for name in ("incidence", "emission", "phase") if name not in geometry]
+    if missing:
+        raise ValueError(f"geometry has no {listed(missing)}; it holds {listed(geometry)}")
+    return {str(name): value for name, value in geometry.items()}
+
+
+def _plan(cube: xr.DataArray, geometry: Any) -> Plan:
+    from .photometry.plan import plan_normalisation
+
+    return plan_normalisation(cube, **_arguments(geometry))
+
+
+def _known_per_band(cube: xr.DataArray, noise: Noise | None) -> bool:
+    """True where nothing that enters the sigmas differs from pixel to pixel before the normalisation."""
+    carried = "pixel_gain" in cube.coords or "brightness_factor" in cube.coords
+    return cube.ndim > 1 and not carried and (noise is None or not noise.random_is_map)
+
+
+def _in_one_pass(
+    made: Plan,
+    noise: Noise | None,
+    ratios: list[BandRatio],
+    centres: NDArray,
+    tolerance: float,
+    parts: bool,
+) -> tuple[NDArray, xr.DataArray]:
+    """The kernel's planes of the normalised cube, which is never held whole, and the cube with its new labels."""
+    from .kernel import NoiseTable, RatioTable, cores, evaluate
+    from .photometry.execution import hand_over
+
+    cube = made.cube
+    table = RatioTable.build(ratios, centres, tolerance)
+    noises = None if noise is None else _noise_table(noise.for_cube(cube, tolerance), NoiseTable)
+    shape = cube.shape[1:]
+    planes = np.empty(
+        (len(ratios), 1 if noise is None else 4 if parts else 2, cube[0].size), dtype=cube.dtype
+    )
+    # a fraction of the value stays that fraction: the factor matters to the other parts alone
+    scaled = noises is not None and bool(noises.random[:, :2].any() or noises.shared[:, 0].any())
+
+    def use(values: NDArray, gain: NDArray | None, factor: NDArray, first: int) -> None:
+        evaluate(
+            values,
+            table,
+            noises,
+            pixel_gain=None if noises is None else gain,
+            brightness_factor=factor if scaled else None,
+            parts=parts,
+            out=planes,
+            offset=first,
+        )
+
+    in_memory = {name: plane.values for name, plane in made.planes.items()}
+    flag = hand_over(cube.values, in_memory, made.correction, cores(), use)
+    return planes.reshape(*planes.shape[:2], *shape), made.labelled(cube.values, flag.reshape(shape))
 
 
 def _planes(

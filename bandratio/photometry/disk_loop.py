@@ -22,7 +22,7 @@ _OPTIONS: dict[str, Any] = {"cache": True, "nogil": True, "error_model": "numpy"
 @njit(**_OPTIONS)
 def mixed_law_loop(  # type: ignore[no-untyped-def]
     values, incidence, emission, phase, shadow, L, at_target, spread, spread_at_target, slope_sigma, numbers,
-    out, gain, brightness, flag, offset,
+    out, gain, brightness, flag, offset, to,
 ):  # fmt: skip
     """Normalised values, relative sigma of the correction, flags, and what the values were multiplied by.
 
@@ -42,8 +42,8 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
         1/μ0 of the standard geometry where the quantity is divided by μ0, else 0; largest incidence and emission, and
         slack of the angles [deg]; 1 where the sigma is wanted, else 0.
     values, out, gain, flag : ndarray, shape (band, all pixels), the same, (all pixels,) and (all pixels,)
-        Reflectances, and where to write them normalised, sigma and flags, from pixel `offset` on; no bands: the values
-        are not wanted.
+        Reflectances from pixel `offset` on, and where to write them normalised, sigma and flags, from pixel `to` on; no
+        bands: the values are not wanted.
     brightness : ndarray, shape (0, 1 or band, all pixels)
         Where to write the factors: not at all, of the first band, or of each.
     """
@@ -63,7 +63,7 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
         m = min(_BLOCK, incidence.size - start)
         stop = start + m
         i, e, g = incidence[start:stop], emission[start:stop], phase[start:stop]
-        marks = flag[offset + start : offset + stop]
+        marks = flag[to + start : to + stop]
         _cosine(i, mu0)
         _cosine(e, mu)
         for p in range(m):
@@ -96,14 +96,14 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
                     by = one if per_mu0 == zero else mu0[p] * per_mu0
                     factor[p] = factor[p] * by if marks[p] == 0 else kind(np.nan)
             if band < brightness.shape[0]:
-                multiplied = brightness[band, offset + start : offset + stop]
+                multiplied = brightness[band, to + start : to + stop]
                 for p in range(m):
                     multiplied[p] = factor[p]
             if band >= values.shape[0]:
                 continue
             row, written = (
                 values[band, offset + start : offset + stop],
-                out[band, offset + start : offset + stop],
+                out[band, to + start : to + stop],
             )
             for p in range(m):
                 written[p] = row[p] * factor[p]
@@ -131,7 +131,7 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
             for p in range(m):
                 width = (most[p] - least[p]) / factor[p]
                 variance[p] += width * width / kind(12)
-        written = gain[offset + start : offset + stop]
+        written = gain[to + start : to + stop]
         for p in range(m):
             written[p] = np.sqrt(variance[p]) if marks[p] == 0 else kind(np.nan)
 

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+import threading
+from collections.abc import Callable, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
@@ -15,12 +16,14 @@ from .correction import SLACK_DEG, Correction
 from .hapke import Hapke
 from .laws import MCEWEN_1996, Lambert, Law, LunarLambert
 
-__all__ = ["at_once", "lazily"]
+__all__ = ["at_once", "hand_over", "lazily"]
 
 #: Pixels at a time for laws that are computed plane by plane: the planes stay in the processor's cache.
 _BLOCK_PIXELS = 32_768
 #: Below this many pixels a second thread costs more than it brings.
 _THREAD_PIXELS = 65_536
+#: Pixels at a time where the next step follows at once: bands, sigma and factors of a stretch stay in the second-level cache.
+_CACHED_PIXELS = 24_576
 
 
 def at_once(
@@ -145,20 +148,79 @@ def _run(
     do = _compiled if correction.mixed_only else _plane_by_plane
     threads = max(1, min(threads, pixels // _THREAD_PIXELS))
     stretch = _BLOCK_PIXELS if do is _plane_by_plane else -(-pixels // (1 if threads == 1 else 8 * threads))
+
+    def one(here: slice) -> None:
+        do(correction, flat, _cut(whole, here), out, flag, gain, factor, here, here.start)
+
+    _in_stretches(one, pixels, stretch, threads)
+    factor = factor.reshape(shape if alike and brightness else (factor.shape[0], *shape))
+    return out.reshape(values.shape), flag.reshape(shape), gain.reshape(shape if sigma else (0,)), factor
+
+
+def hand_over(
+    values: NDArray,
+    planes: Mapping[str, NDArray],
+    correction: Correction,
+    threads: int,
+    use: Callable[[NDArray, NDArray | None, NDArray, int], None],
+) -> NDArray[np.int8]:
+    """Normalise an array in memory and hand it over stretch by stretch, while each is still in the processor's cache.
+
+    Parameters
+    ----------
+    values : ndarray, shape (band, …)
+        Reflectances.
+    planes : mapping of str to ndarray
+        As for `at_once`.
+    correction : Correction
+        What to do.
+    threads : int
+        How many threads share the pixels.
+    use : callable
+        Called with normalised values (band, pixel), relative sigma (pixel,) or None, brightness factors (1 or band,
+        pixel), and the number of the first pixel; what it is given is overwritten afterwards.
+
+    Returns
+    -------
+    ndarray of int8, shape (…)
+        The flags.
+    """
+    shape = values.shape[1:]
+    bands, pixels = values.shape[0], math.prod(shape)
+    flat = np.ascontiguousarray(values).reshape(bands, pixels)
+    whole = {name: np.broadcast_to(plane, shape).reshape(-1) for name, plane in planes.items()}
+    flag = np.empty(pixels, dtype=np.int8)
+    do = _compiled if correction.mixed_only else _plane_by_plane
+    factors = 1 if correction.bands_alike else bands
+    scratch = threading.local()
+
+    def one(here: slice) -> None:
+        if not hasattr(scratch, "stack"):
+            scratch.stack = np.empty((bands + 1 + factors) * _CACHED_PIXELS, dtype=values.dtype)
+            scratch.flag = np.empty(_CACHED_PIXELS, dtype=np.int8)
+        m = here.stop - here.start
+        stack = scratch.stack[: (bands + 1 + factors) * m].reshape(-1, m)
+        out, gain, factor, marks = stack[:bands], stack[bands], stack[bands + 1 :], scratch.flag[:m]
+        do(correction, flat, _cut(whole, here), out, marks, gain[: m * correction.has_sigma], factor, here, 0)
+        flag[here] = marks
+        use(out, gain if correction.has_sigma else None, factor, here.start)
+
+    _in_stretches(one, pixels, _CACHED_PIXELS, max(1, min(threads, pixels // _THREAD_PIXELS)))
+    return flag.reshape(shape)
+
+
+def _cut(planes: Mapping[str, NDArray], here: slice) -> dict[str, NDArray]:
+    return {name: np.ascontiguousarray(plane[here]) for name, plane in planes.items()}
+
+
+def _in_stretches(one: Callable[[slice], None], pixels: int, stretch: int, threads: int) -> None:
     stretches = [slice(start, min(start + stretch, pixels)) for start in range(0, pixels, max(1, stretch))]
-
-    def one(stretch: slice) -> None:
-        cut = {name: np.ascontiguousarray(plane[stretch]) for name, plane in whole.items()}
-        do(correction, flat, cut, out, flag, gain, factor, stretch)
-
     if threads == 1:
         for each in stretches:
             one(each)
     else:
         with ThreadPoolExecutor(threads) as pool:
             list(pool.map(one, stretches))
-    factor = factor.reshape(shape if alike and brightness else (factor.shape[0], *shape))
-    return out.reshape(values.shape), flag.reshape(shape), gain.reshape(shape if sigma else (0,)), factor
 
 
 def _plane_by_plane(
@@ -169,15 +231,17 @@ def _plane_by_plane(
     flag: NDArray,
     gain: NDArray,
     factor: NDArray,
-    stretch: slice,
+    here: slice,
+    to: int,
 ) -> None:
+    there = slice(to, to + here.stop - here.start)
     angles = (planes["incidence"], planes["emission"], planes["phase"])
     marked = correction.flags(*angles, planes.get("shadow"))
     if gain.size:
         # before the values are looked at, so that the sigma depends on the geometry alone
-        gain[stretch] = correction.sigma(*angles, marked, planes.get("slope_sigma"))
-    correction.apply(values[:, stretch], *angles, marked, out[:, stretch], factor[:, stretch])
-    flag[stretch] = marked
+        gain[there] = correction.sigma(*angles, marked, planes.get("slope_sigma"))
+    correction.apply(values[:, here], *angles, marked, out[:, there], factor[:, there])
+    flag[there] = marked
 
 
 def _compiled(
@@ -188,7 +252,8 @@ def _compiled(
     flag: NDArray,
     gain: NDArray,
     factor: NDArray,
-    stretch: slice,
+    here: slice,
+    to: int,
 ) -> None:
     from .disk_loop import mixed_law_loop
 
@@ -216,7 +281,8 @@ def _compiled(
         gain,
         factor,
         flag,
-        stretch.start,
+        here.start,
+        to,
     )
 
 

@@ -190,7 +190,7 @@ def test_compiled_loop_agrees_with_the_readable_formulas():
                 compiled = _run(values, planes, correction)
                 factors = np.empty((1 if correction.bands_alike else 4, n), np.float32)
                 plain = np.empty_like(values), np.empty(n, np.int8), np.empty(n, np.float32), factors
-                _plane_by_plane(correction, values, planes, *plain, slice(0, n))
+                _plane_by_plane(correction, values, planes, *plain, slice(0, n), 0)
                 np.testing.assert_allclose(compiled[0], plain[0], rtol=1e-12)
                 np.testing.assert_array_equal(compiled[1], plain[1])
                 np.testing.assert_allclose(compiled[2], plain[2], rtol=1e-5)
