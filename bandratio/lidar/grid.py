@@ -35,7 +35,7 @@ def grid_returns(albedos: xr.Dataset, like: xr.DataArray | xr.Dataset, *, pool: 
         As from `albedo_from_returns`, with positions ``x``, ``y``; lazy ones are streamed.
     like : DataArray or Dataset
         A cube or map with regular 1-D coordinates ``x`` and ``y``, whose grid is taken. Positions in another map
-        projection are transformed to its own.
+        projection are transformed to its own; those of unknown projection are taken to be in it.
     pool : int
         Side of the window of cells whose shots are taken together, odd; 1: each cell by itself. Windows overlap, so
         neighbouring cells are no longer independent: their p-values depend positively on each other, under which the
