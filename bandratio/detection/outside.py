@@ -123,7 +123,7 @@ class Points:
         Raises
         ------
         ValueError
-            If an error is negative, or a covariance larger than the two sigmas allow.
+            If an error is negative, or a covariance larger than the two sigmas (with their relative parts) allow.
         """
         arrays = [
             np.asarray(value, dtype=float)
@@ -142,10 +142,12 @@ class Points:
                 raise ValueError(f"{name} must be zero or above, got {values[values < 0][0]:g}")
             if np.isinf(values).any():
                 raise ValueError(f"{name} must be finite; mark what is missing as NaN")
-        if (np.abs(cov) > s_a * s_b * (1 + 1e-9)).any():
-            at = int(np.argmax(np.abs(cov) - s_a * s_b))
+        whole_a, whole_b = np.hypot(s_a, r_a * a), np.hypot(s_b, r_b * b)
+        if (np.abs(cov) > whole_a * whole_b * (1 + 1e-6)).any():
+            at = int(np.nanargmax(np.abs(cov) - whole_a * whole_b))
             raise ValueError(
-                f"covariance must not exceed sigma_red·sigma_infrared, got {cov[at]:g} for {s_a[at]:g}·{s_b[at]:g}"
+                f"covariance must not exceed what the two sigmas allow, got {cov[at]:g} for sigmas of {whole_a[at]:g} and "
+                f"{whole_b[at]:g}"
             )
         dropout = (np.isnan(b) | (b < limit)) & ~np.isnan(limit)
         return cls(

@@ -212,9 +212,7 @@ def test_with_one_material_scaling_both_channels_changes_nothing(point, s_a, s_b
     if once[0] > 1e-5:
         assert p_again == pytest.approx(p, rel=1e-4, abs=1e-9)
     # and it is the plain ratio test
-    ratio, _ = hull_p_values(
-        one(ratio_half_plane(material[0] / material[1])), Points.of(*point, s_a, s_b)
-    )
+    ratio, _ = hull_p_values(one(ratio_half_plane(material[0] / material[1])), Points.of(*point, s_a, s_b))
     assert ratio == pytest.approx(once, rel=1e-5, abs=1e-5)
 
 
@@ -249,6 +247,61 @@ def test_a_dropout_is_outside_only_if_it_is_so_at_every_infrared_albedo():
     assert outer_p_values(one(hull), measured)[0] < 1e-10
     outside = Points.of(0.2, np.nan, 0.01, 0.01, infrared_limit=0.05)
     assert outer_p_values(one(hull), outside)[0] == pytest.approx(np.exp(-0.5 * 5**2), rel=1e-6)
+
+
+def test_the_outer_loop_agrees_with_the_same_done_edge_by_edge():
+    rng = np.random.default_rng(6)
+    hull = mixture_hull(materials_as_albedo([SOIL, ILMENITE, (0.58, 0.0065), (0.6, 0.5)]))
+    a, b = rng.uniform(-0.1, 0.9, 300), rng.uniform(-0.1, 0.9, 300)
+    s_a, s_b = rng.uniform(0.005, 0.05, (2, 300))
+    covariance = rng.uniform(-0.9, 0.9, 300) * s_a * s_b
+    p = outer_p_values(one(hull), Points.of(a, b, s_a, s_b, covariance=covariance))
+    assert 50 < (p < 1).sum() < 290
+    for i in range(300):
+        sigma = np.array([[s_a[i] ** 2, covariance[i]], [covariance[i], s_b[i] ** 2]])
+        spread = np.sqrt(np.einsum("ej,jk,ek->e", hull.normals, sigma, hull.normals))
+        d = max(((hull.normals @ [a[i], b[i]] + hull.offsets) / spread).max(), 0)
+        assert p[i] == pytest.approx(np.exp(-(d**2) / 2), rel=1e-6, abs=1e-300)
+
+
+@pytest.mark.parametrize(("relative_red", "relative_infrared"), [(0.03, 0.03), (0.03, 0.2), (0.2, 0.2)])
+def test_listed_ground_and_ice_are_seldom_called_unexplained(relative_red, relative_infrared):
+    rng = np.random.default_rng(14)
+    ice = materials_as_albedo([(0.58, 0.0065), (0.82, 0.009)])
+    hull = mixture_hull(np.vstack([GROUND, ice]))
+    n = 200_000
+    share, fraction = rng.uniform(0, 1, (2, n, 1))
+    fraction[rng.random(n) < 0.3] = 0  # bare ground
+    fraction[rng.random(n) < 0.3] = 1  # pure ice
+    bare = reflectance_from_albedo(share * GROUND[0] + (1 - share) * GROUND[1])
+    truth = (1 - fraction) * bare + fraction * reflectance_from_albedo(ice[rng.integers(0, 2, n)])
+    measured = truth * (1 + [relative_red, relative_infrared] * rng.standard_normal((n, 2)))
+    measured += 0.001 * rng.standard_normal((n, 2))
+    points = Points.of(
+        *measured.T, 0.001, 0.001, relative_red=relative_red, relative_infrared=relative_infrared
+    )
+    for level, found in shares_below(outer_p_values(one(hull), points)).items():
+        assert found < level + 4 * np.sqrt(level / n)
+
+
+def test_errors_common_to_both_albedos_are_taken():
+    # one range error moves both: a covariance that only the relative parts allow
+    common = 0.05
+    points = Points.of(
+        0.3,
+        0.2,
+        0.001,
+        0.001,
+        covariance=common**2 * 0.3 * 0.2,
+        relative_red=common,
+        relative_infrared=common,
+    )
+    outside, _ = hull_p_values(one(mixture_hull(GROUND)), points)
+    apart, _ = hull_p_values(
+        one(mixture_hull(GROUND)),
+        Points.of(0.3, 0.2, 0.001, 0.001, relative_red=common, relative_infrared=common),
+    )
+    assert outside[0] > apart[0]  # it leaves the ratio alone, and the ratio is what is outside
 
 
 @given(st.lists(st.tuples(st.floats(-1, 1), st.floats(-1, 1)), min_size=2, max_size=40))

@@ -213,7 +213,7 @@ A = xr.DataArray([0.1, 0.2], dims="shot", coords={"shot": [1, 2]})
 BAD = [
     ({"sigma_red": -0.01}, "sigma_red must be zero or above, got -0.01"),
     ({"sigma_infrared": np.inf}, "sigma_infrared must be finite"),
-    ({"covariance": 1.0}, r"covariance must not exceed sigma_red·sigma_infrared, got 1 for 0.01·0.01"),
+    ({"covariance": 1.0}, r"covariance must not exceed what the two sigmas allow, got 1 for sigmas of 0.01"),
     ({"relative_red": -1}, "relative_red must be zero or above"),
     (
         {"relative_infrared": [0.1, 0.2, 0.3]},
