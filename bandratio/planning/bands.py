@@ -117,10 +117,10 @@ def compare_filter_sets(
     -----
     Each set is used whole: the best contrast of its log reflectances, a product of band ratios. It is trained without
     one wanted and one unwanted specimen and then has to tell those two apart, through the set's own noise. So a set
-    is not favoured for having more bands: bands that only fit the training specimens lose on the others. Gain and offset
-    errors of a band count as if new in each specimen, as for a threshold that is carried from one camera to another. The sets see
-    the same pairs, and differences are taken pair by pair; their intervals come from a bootstrap over specimens and
-    hold together (Bonferroni).
+    is not favoured for having more bands: bands that only fit the training specimens lose on the others. Gain and
+    offset errors of a band count as if new in each specimen, as for a threshold that is carried from one camera to
+    another. The sets see the same pairs, and differences are taken pair by pair; their intervals come from a bootstrap
+    over specimens and hold together (Bonferroni).
 
     References
     ----------
@@ -164,7 +164,9 @@ def compare_filter_sets(
     areas.insert(2, "lower", [low for low, _ in limits])
     areas.insert(3, "upper", [high for _, high in limits])
     differences = _differences(matrices, drawn)
-    return FilterComparison(areas, differences, tuple(rests_on(groups.counts, spectra, is_wanted, seen)))
+    return FilterComparison(
+        areas, differences, tuple(rests_on(groups.counts, pairs, spectra, is_wanted, seen))
+    )
 
 
 def _differences(matrices: Mapping[str, NDArray], drawn: Mapping[str, NDArray]) -> pd.DataFrame:
@@ -288,7 +290,7 @@ def rank_bands(
     findings = [
         f"the best of {len(order)} subsets was chosen on these specimens, which makes its area about {optimism:.3f} too good",
         f"{int(same.sum())} of {len(order)} subsets are not told apart from the best",
-        *rests_on(groups.counts, spectra, is_wanted, seen),
+        *rests_on(groups.counts, pairs, spectra, is_wanted, seen),
     ]
     return BandRanking(table, bands, optimism, tuple(findings))
 

@@ -146,7 +146,11 @@ def ratio_name(ratio: tuple[int, int], centres: NDArray) -> str:
 
 
 def rests_on(
-    counts: tuple[int, int], spectra: xr.DataArray, is_wanted: NDArray[np.bool_], seen: NDArray[np.bool_]
+    counts: tuple[int, int],
+    pairs: Pairs,
+    spectra: xr.DataArray,
+    is_wanted: NDArray[np.bool_],
+    seen: NDArray[np.bool_],
 ) -> list[str]:
     """What a recommendation rests on, in plain sentences."""
     first, second = int((is_wanted & seen).sum()), int((~is_wanted & seen).sum())
@@ -155,6 +159,11 @@ def rests_on(
         f"({second} spectra) in the laboratory: mixtures, maturity and geometry of a real surface are not in it"
     )
     found = [basis]
+    if pairs.wanted.size < counts[0] * counts[1]:
+        found.append(
+            f"{pairs.wanted.size} of {counts[0] * counts[1]} pairs of specimens were tried, drawn so that each specimen "
+            "takes part about equally often"
+        )
     left = [str(name) for name in spectra["sample"].values[~seen]] if "sample" in spectra.coords else []
     if left:
         found.append(

@@ -171,6 +171,7 @@ def test_paired_differences_find_the_better_set_and_no_false_one():
         "sees it too": ([650.0, 700.0, 750.0], 20, br.Noise(relative=0.005)),
     }
     found = br.compare_filter_sets(sets, spectra, "wanted", "unwanted")
+    assert any("of 625 pairs of specimens were tried" in finding for finding in found.findings)
     verdicts = {(row["first"], row["second"]): row["verdict"] for _, row in found.differences.iterrows()}
     assert verdicts["sees it", "does not"] == "sees it is better"
     assert verdicts["does not", "sees it too"] == "sees it too is better"
@@ -195,6 +196,7 @@ def test_differences_hold_together():
     sets = {str(i): (CENTRES[i : i + 3], None, None) for i in range(4)}
     found = br.compare_filter_sets(sets, spectra, "wanted", "unwanted")
     assert len(found.differences) == 6
+    assert not any("pairs of specimens were tried" in finding for finding in found.findings)
     assert (found.differences.lower <= found.differences.difference).all()
     assert (found.differences.difference <= found.differences.upper).all()
 
