@@ -299,6 +299,22 @@ def test_netcdf_of_the_classic_format(tmp_path, values):
     np.testing.assert_array_equal(br.open_cube(path), values)
 
 
+def test_projection_of_a_netcdf_file_under_another_name(tmp_path, values):
+    import pyproj
+    import rioxarray  # noqa: F401 (puts .rio on xarray)
+
+    cube = br.as_cube(values, CENTRES).assign_coords(y=-np.arange(33.0), x=np.arange(47.0))
+    moon = pyproj.CRS.from_user_input(f"+proj=stere +lat_0=90 +R={MOON_RADIUS_M}")
+    file = cube.assign_coords(polar=xr.DataArray(0, attrs=moon.to_cf())).to_dataset()
+    file["reflectance"].attrs["grid_mapping"] = "polar"
+    file.to_netcdf(tmp_path / "scene.nc", engine="h5netcdf")
+    opened = br.open_cube(tmp_path / "scene.nc")
+    assert opened.rio.crs.to_dict()["R"] == MOON_RADIUS_M
+    for ending in (".tif", ".zarr", ".nc"):
+        maps = br.open_maps(br.write_maps(br.parameters(opened), tmp_path / f"maps{ending}"))
+        assert maps.red_slope.rio.crs.to_dict()["R"] == MOON_RADIUS_M
+
+
 def test_which_variable(tmp_path, values):
     dims = ("wavelength", "y", "x")
     both = xr.Dataset({"a": (dims, values), "b": (dims, values + 1)}, {"wavelength": CENTRES})

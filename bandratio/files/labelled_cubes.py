@@ -80,6 +80,9 @@ def labelled_cube(
             dtype=np.dtype(np.float64 if array.dtype == np.float64 and not _packed(stored) else np.float32),
         )
         renamed = _plain_names(dims)
+        projection = str(array.encoding.get("grid_mapping", array.attrs.get("grid_mapping", "")))
+        if projection in array.coords:
+            renamed[projection] = "spatial_ref"
         coords = {
             renamed.get(str(key), str(key)): xr.Variable(
                 [renamed.get(str(dim), str(dim)) for dim in coordinate.dims],

@@ -105,12 +105,15 @@ def encoded(layout: Layout) -> xr.Dataset:
     maps = layout.maps.copy(deep=False)
     maps.attrs = writable_attributes(maps.attrs)
     for array in maps.variables.values():
+        projection = array.encoding.get("grid_mapping")
         array.attrs = writable_attributes(array.attrs)
+        if projection is not None:
+            array.attrs["grid_mapping"] = projection
         # what another file's chunks or packing were is nothing to this one
         array.encoding = {}
     for name in maps.data_vars:
         if "spatial_ref" in maps.coords:
-            maps[name].attrs["grid_mapping"] = "spatial_ref"
+            maps[name].attrs.setdefault("grid_mapping", "spatial_ref")
     return maps
 
 
