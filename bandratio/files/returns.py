@@ -103,6 +103,8 @@ def open_returns(
     specs = {"red": _spec("red", red), "infrared": _spec("infrared", infrared)}
     tables = [shot_table(entry) for entry in paths]
     known_crs = crs if crs is not None else tables[0].crs
+    if crs is None:
+        _refuse_two_projections(tables)
     apart = len(tables) == 2 or any(spec.get("where") for spec in specs.values())
     if not apart and pair_radius is not None:
         raise ValueError(
@@ -211,6 +213,20 @@ def _spec(channel: str, given: Any) -> Mapping[str, Any]:
     if given.get("where") is not None and not isinstance(given["where"], Mapping):
         raise TypeError(f"where of {channel} must be {{column: value}}, got {given['where']!r}")
     return given
+
+
+def _refuse_two_projections(tables: list[ShotTable]) -> None:
+    told = [table.crs for table in tables if table.crs]
+    if len(told) < 2 or told[0] == told[1]:
+        return
+    from rasterio.crs import CRS
+
+    first, second = (CRS.from_wkt(text) for text in told)
+    if first != second:
+        raise ValueError(
+            f"{tables[0].path} and {tables[1].path} are in different map projections; transform one of them first, or "
+            "give crs=… where what a file says is wrong"
+        )
 
 
 def _value(text: str) -> float | str:

@@ -89,10 +89,10 @@ def test_units_may_be_said_where_the_file_does_not(shots, tmp_path):
     assert unsaid["red"].attrs["units"] == ""
 
 
-def _las(path, x, y, intensity, **dimensions):
+def _las(path, x, y, intensity, crs=MOON, **dimensions):
     header = laspy.LasHeader(point_format=6, version="1.4")
     header.scales, header.offsets = [0.001] * 3, [0, 0, 0]
-    header.add_crs(CRS.from_user_input(MOON))
+    header.add_crs(CRS.from_user_input(crs))
     for name, values in dimensions.items():
         if name not in header.point_format.dimension_names:
             header.add_extra_dim(laspy.ExtraBytesParams(name=name, type=values.dtype))
@@ -213,6 +213,16 @@ def test_pairing_on_longitude_and_latitude_is_in_metres(tmp_path):
     assert near.attrs["n_paired"] == 1
     assert far.attrs["n_paired"] == 2
     assert float(far["pair_distance"].max()) == pytest.approx(20, abs=1e-3)
+
+
+def test_two_files_in_two_projections_are_refused(tmp_path):
+    x, intensity = np.array([1.0, 2.0]), np.array([5, 6], dtype=np.uint16)
+    _las(tmp_path / "a.las", x, x, intensity)
+    _las(tmp_path / "b.las", x, x, intensity, crs="+proj=stere +lat_0=90 +R=1737400 +units=m")
+    files = (tmp_path / "a.las", tmp_path / "b.las")
+    with pytest.raises(ValueError, match=r"a.las and .*b.las are in different map projections; .*crs="):
+        br.open_returns(files, red="intensity", infrared="intensity")
+    assert br.open_returns(files, red="intensity", infrared="intensity", crs=MOON).attrs["n_paired"] == 2
 
 
 def test_saturated_column_and_zero_for_each_channel(tmp_path):
