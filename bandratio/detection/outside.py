@@ -142,13 +142,8 @@ class Points:
                 raise ValueError(f"{name} must be zero or above, got {values[values < 0][0]:g}")
             if np.isinf(values).any():
                 raise ValueError(f"{name} must be finite; mark what is missing as NaN")
-        whole_a, whole_b = np.hypot(s_a, r_a * a), np.hypot(s_b, r_b * b)
-        if (np.abs(cov) > whole_a * whole_b * (1 + 1e-6)).any():
-            at = int(np.nanargmax(np.abs(cov) - whole_a * whole_b))
-            raise ValueError(
-                f"covariance must not exceed what the two sigmas allow, got {cov[at]:g} for sigmas of {whole_a[at]:g} and "
-                f"{whole_b[at]:g}"
-            )
+        if cov.any():
+            _check_covariance(cov, np.hypot(s_a, r_a * a), np.hypot(s_b, r_b * b))
         dropout = (np.isnan(b) | (b < limit)) & ~np.isnan(limit)
         return cls(
             a, np.where(dropout, limit, b), s_a**2, s_b**2, cov, r_a**2,
@@ -168,6 +163,16 @@ class Points:
             self.red, self.infrared, self.var_red, self.var_infrared, self.covariance, self.scaled_red,
             self.scaled_infrared,
         )  # fmt: skip
+
+
+def _check_covariance(covariance: Floats, sigma_red: Floats, sigma_infrared: Floats) -> None:
+    beyond = np.abs(covariance) - sigma_red * sigma_infrared * (1 + 1e-6)
+    if (beyond > 0).any():
+        at = int(np.nanargmax(beyond))
+        raise ValueError(
+            f"covariance must not exceed what the two sigmas allow, got {covariance[at]:g} for sigmas of "
+            f"{sigma_red[at]:g} and {sigma_infrared[at]:g}"
+        )
 
 
 def _flattened(arrays: list[Floats]) -> list[Floats]:
