@@ -448,6 +448,34 @@ def test_memory_does_not_grow_with_the_scene(tmp_path, ending):
     assert int(run.stderr.split()[-1]) * 1024 <= 1.5 * 2**30
 
 
+def test_blocks_are_computed_by_one_thread_each(tmp_path, scene, monkeypatch):
+    """The scheduler's threads are all that work: the compiled loop starts none of its own beside them."""
+
+    def refuse(*arguments, **options):
+        raise AssertionError("a second pool of threads within a block")
+
+    monkeypatch.setattr("bandratio.kernel.ThreadPoolExecutor", refuse)
+    with dask.config.set(scheduler="threads", num_workers=2):
+        br.write_maps(maps_of(scene, size=768), tmp_path / "maps.zarr")
+
+
+@pytest.mark.usefixtures("one_by_one")
+def test_full_disk_while_a_netcdf_file_is_finished(tmp_path, scene, monkeypatch):
+    def write(*arguments, **options):
+        raise RuntimeError("Unable to flush file (file write failed: errno = 28)")
+
+    with monkeypatch.context() as patch:
+        patch.setattr(xr.Dataset, "to_netcdf", write)
+        with pytest.raises(
+            OSError, match=r"maps\.nc: the finished file cannot be written .*errno = 28.*36 of 36 blocks"
+        ):
+            br.write_maps(maps_of(scene), tmp_path / "maps.nc")
+    assert not (tmp_path / "maps.nc").exists()
+    written = failing_after(monkeypatch, 0, Stop())
+    br.write_maps(maps_of(scene), tmp_path / "maps.nc", resume=True)
+    assert written == []
+
+
 def test_blocks_of_nothing_are_not_stored(tmp_path):
     values = np.full((4, 512, 512), np.nan, np.float32)
     values[:, :256, :256] = 0.2

@@ -124,7 +124,11 @@ def _finish_netcdf(layout: Layout, store: Path, made: Path) -> None:
             maps[name].encoding = {}
             if linked:
                 maps[name].attrs["grid_mapping"] = linked
-        maps.to_netcdf(made, engine="h5netcdf", encoding=encoding)
+        try:
+            maps.to_netcdf(made, engine="h5netcdf", encoding=encoding)
+        except RuntimeError as error:
+            # how HDF5 says that it could not write, for instance to a full disk
+            raise OSError(" ".join(str(error).split())) from None
 
 
 def open_maps(path: str | Path) -> xr.Dataset:
