@@ -153,9 +153,15 @@ class Scene:
 
 
 def _labelled(values: Any) -> xr.DataArray:
-    array = values if hasattr(values, "dask") else np.asarray(values, dtype=float)
-    dims = {0: (), 1: ("shot",), 2: ("y", "x")}.get(array.ndim, tuple(f"dim_{i}" for i in range(array.ndim)))
-    return xr.DataArray(array, dims=dims)
+    if not hasattr(values, "dask"):
+        try:
+            values = np.asarray(values, dtype=float)
+        except (TypeError, ValueError):
+            raise TypeError(f"red must be numbers (albedos as fractions), got {str(values)[:60]}") from None
+    dims = {0: (), 1: ("shot",), 2: ("y", "x")}.get(
+        values.ndim, tuple(f"dim_{i}" for i in range(values.ndim))
+    )
+    return xr.DataArray(values, dims=dims)
 
 
 def _fitted(name: str, value: Any, template: xr.DataArray) -> Any:
