@@ -68,7 +68,9 @@ def estimate_noise(cube: xr.DataArray) -> Noise:
     responses: list[list[NDArray]] = [[] for _ in range(cube.sizes["wavelength"])]
     for square in _squares(cube):
         values = np.asarray(square.values, dtype=float)
-        factor = (xr.ones_like(square, dtype=float) * brightness_factor_of(square)).transpose(*square.dims).values
+        factor = (
+            (xr.ones_like(square, dtype=float) * brightness_factor_of(square)).transpose(*square.dims).values
+        )
         for band, picture in enumerate(values):
             second = picture[:, :-2] - 2 * picture[:, 1:-1] + picture[:, 2:]
             response = (second[:-2] - 2 * second[1:-1] + second[2:]) / factor[band, 1:-1, 1:-1]
