@@ -226,11 +226,14 @@ def _loop(  # type: ignore[no-untyped-def]
             terms = slice(first[k], first[k + 1])
             along = common_gain if n0[k] != 0.0 or d0[k] != 0.0 else 0.0
             gain = pixel_gain[start:stop] if n0[k] != 0.0 or d0[k] != 0.0 else pixel_gain[:0]
-            if planes == 2 and first[k + 1] - first[k] <= 3 and gain.size == 0:
+            level = not d[terms].any()
+            if planes == 2 and first[k + 1] - first[k] <= 3 and (gain.size == 0 or level):
                 _short_ratio(
                     reflectance, start, stop, var_random, band[terms], n[terms], d[terms], n0[k], d0[k], scale[k], along,
                     out[k, 0, here], out[k, 1, here],
                 )  # fmt: skip
+                if gain.size:
+                    _add_gain(gain, scale[k] * n0[k] / d0[k], out[k, 0, here], out[k, 1, here])
             else:
                 _any_ratio(
                     reflectance, start, stop, var_random, var_shared, band[terms], n[terms], d[terms],
@@ -314,6 +317,16 @@ def _short_ratio(  # type: ignore[no-untyped-def]
         # what does not fit the type of the output is no value either (a nodata value that was never masked)
         value[i] = p if abs(p) <= largest else np.nan
         sigma[i] = s if s <= largest else np.nan
+
+
+@njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})
+def _add_gain(gain, offset, value, sigma):  # type: ignore[no-untyped-def]
+    """Add the gain error of each pixel to the sigma of a ratio without a denominator: Σ g_j R_j is p less its offset."""
+    kind = sigma.dtype.type
+    constant = kind(offset)
+    for i in range(value.size):
+        common = kind(gain[i]) * (value[i] - constant)
+        sigma[i] = np.sqrt(sigma[i] * sigma[i] + common * common)
 
 
 @njit(cache=True, nogil=True, error_model="numpy", fastmath={"contract"})

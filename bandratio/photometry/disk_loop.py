@@ -55,10 +55,15 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
         kind(numbers[2]),
         kind(numbers[3]),
     )
-    scratch = np.empty((7, _BLOCK), out.dtype)
-    mu0, mu, cos_g, factor, least, most, variance = (
-        scratch[0], scratch[1], scratch[2], scratch[3], scratch[4], scratch[5], scratch[6],
-    )  # fmt: skip
+    bands = max(values.shape[0], brightness.shape[0])
+    repeats = np.zeros(L.shape[0], np.bool_)
+    for band in range(1, L.shape[0]):
+        repeats[band] = (L[band] == L[band - 1]).all()
+    chosen_first = spread.shape[0] > 0 and repeats[1:].all() and (spread[0] == L[0]).all()
+    scratch = np.empty((10, _BLOCK), out.dtype)
+    mu0, mu, cos_g, factor, least = scratch[0], scratch[1], scratch[2], scratch[3], scratch[4]
+    # 1/μ0, 1/(μ0 + μ) and 1/(2L/(μ0 + μ) + 1 − L): three divisions serve everything
+    by_mu0, by_sum, shape, most, variance = scratch[5], scratch[6], scratch[7], scratch[8], scratch[9]
     for start in range(0, incidence.size, _BLOCK):
         m = min(_BLOCK, incidence.size - start)
         stop = start + m
@@ -67,52 +72,46 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
         _cosine(i, mu0)
         _cosine(e, mu)
         for p in range(m):
+            by_mu0[p] = one / mu0[p]
+            by_sum[p] = one / (mu0[p] + mu[p])
+        for p in range(m):
             # the last that applies wins, as in Correction.flags
-            mark = 0
-            if not (
-                (g[p] <= i[p] + e[p] + slack)
-                & (g[p] >= abs(i[p] - e[p]) - slack)
-                & (i[p] >= zero)
-                & (e[p] >= zero)
-            ):
-                mark = 5
-            if e[p] > largest_e:
-                mark = 4
-            if i[p] > largest_i:
-                mark = 3
-            marks[p] = mark
+            possible = (g[p] <= i[p] + e[p] + slack) & (g[p] >= abs(i[p] - e[p]) - slack)
+            mark = 0 if possible & (i[p] >= zero) & (e[p] >= zero) else 5
+            mark = 4 if e[p] > largest_e else mark
+            marks[p] = 3 if i[p] > largest_i else mark
         if shadow.size:
             for p in range(m):
-                if shadow[start + p]:
-                    marks[p] = 2
+                marks[p] = 2 if shadow[start + p] else marks[p]
         for p in range(m):
-            if not (np.isfinite(i[p]) & np.isfinite(e[p]) & np.isfinite(g[p])):
-                marks[p] = 1
-        for band in range(max(values.shape[0], brightness.shape[0])):
-            if band == 0 or not (L[band] == L[band - 1]).all():
-                _factor(L[band], at_target[band], g, mu0, mu, factor)
-                for p in range(m):
-                    # per_mu0 is 0 for radiance factors, whose factor stays as it is
-                    by = one if per_mu0 == zero else mu0[p] * per_mu0
-                    factor[p] = factor[p] * by if marks[p] == 0 else kind(np.nan)
+            # a sum is finite where its parts are
+            marks[p] = marks[p] if np.isfinite(i[p] + e[p] + g[p]) else 1
+        for band in range(bands):
+            if not repeats[band]:
+                _shape(L[band], g, mu0, mu, by_sum, shape)
+                target = kind(at_target[band])
+                if per_mu0 == zero:
+                    for p in range(m):
+                        factor[p] = target * by_mu0[p] * shape[p] if marks[p] == 0 else kind(np.nan)
+                else:
+                    # D/μ0, in which μ0 itself cancels
+                    for p in range(m):
+                        factor[p] = target * per_mu0 * shape[p] if marks[p] == 0 else kind(np.nan)
             if band < brightness.shape[0]:
                 multiplied = brightness[band, to + start : to + stop]
                 for p in range(m):
                     multiplied[p] = factor[p]
             if band >= values.shape[0]:
                 continue
-            row, written = (
-                values[band, offset + start : offset + stop],
-                out[band, to + start : to + stop],
-            )
+            row, written = values[band, offset + start : offset + stop], out[band, to + start : to + stop]
             for p in range(m):
                 written[p] = row[p] * factor[p]
         if numbers[4] == 0:
             continue
-        _cosine(g, cos_g)
-        variance[:] = zero
+        variance[:m] = zero
         if slope_sigma.size > 1 or slope_sigma[0] > 0:
-            _slope_variance(L, g, mu0, mu, cos_g, per_mu0, variance)
+            _cosine(g, cos_g)
+            _slope_variance(L, repeats, g, mu0, mu, cos_g, by_mu0, by_sum, shape, per_mu0, variance)
             if slope_sigma.size == 1:
                 sigma = kind(slope_sigma[0])
                 for p in range(m):
@@ -121,58 +120,74 @@ def mixed_law_loop(  # type: ignore[no-untyped-def]
                 for p in range(m):
                     variance[p] *= kind(slope_sigma[start + p]) ** 2
         for law in range(spread.shape[0]):
-            _factor(spread[law], spread_at_target[law], g, mu0, mu, factor)
-            for p in range(m):
-                least[p] = factor[p] if law == 0 else min(least[p], factor[p])
-                most[p] = factor[p] if law == 0 else max(most[p], factor[p])
+            if law > 0 or not chosen_first:
+                _shape(spread[law], g, mu0, mu, by_sum, shape)
+            target = kind(spread_at_target[law])
+            if law == 0:
+                # the first law of the spread is the one that was chosen
+                for p in range(m):
+                    factor[p] = least[p] = most[p] = target * by_mu0[p] * shape[p]
+            else:
+                for p in range(m):
+                    other = target * by_mu0[p] * shape[p]
+                    least[p] = min(least[p], other)
+                    most[p] = max(most[p], other)
         if spread.shape[0]:
-            # the first law of the spread is the one that was chosen
-            _factor(spread[0], spread_at_target[0], g, mu0, mu, factor)
+            twelfth = kind(1 / 12)
             for p in range(m):
                 width = (most[p] - least[p]) / factor[p]
-                variance[p] += width * width / kind(12)
+                variance[p] += width * width * twelfth
         written = gain[to + start : to + stop]
         for p in range(m):
             written[p] = np.sqrt(variance[p]) if marks[p] == 0 else kind(np.nan)
 
 
 @njit(**_OPTIONS)
-def _slope_variance(L, phase, mu0, mu, cos_g, per_mu0, variance):  # type: ignore[no-untyped-def]
+def _shape(L, phase, mu0, mu, by_sum, shape):  # type: ignore[no-untyped-def]
+    """1/(2L/(μ0 + μ) + 1 − L), so that D is μ0 over it."""
+    kind = shape.dtype.type
+    c0, c1, c2, c3 = kind(L[0]), kind(L[1]), kind(L[2]), kind(L[3])
+    one, two, zero = kind(1), kind(2), kind(0)
+    constant = L[1] == 0 and L[2] == 0 and L[3] == 0
+    if constant and L[0] == 0:
+        for p in range(phase.size):
+            shape[p] = one
+    elif constant and L[0] == 1:
+        half = kind(0.5)
+        for p in range(phase.size):
+            shape[p] = half * (mu0[p] + mu[p])
+    else:
+        for p in range(phase.size):
+            g = kind(phase[p])
+            weight = max(c0 + g * (c1 + g * (c2 + g * c3)), zero)
+            shape[p] = one / (two * weight * by_sum[p] + (one - weight))
+
+
+@njit(**_OPTIONS)
+def _slope_variance(  # type: ignore[no-untyped-def]
+    L, repeats, phase, mu0, mu, cos_g, by_mu0, by_sum, shape, per_mu0, variance
+):
     """Variance of ln R for a slope error of 1 radian along either axis; the slopes are the mean over the bands."""
     kind = variance.dtype.type
     one, two, zero = kind(1), kind(2), kind(0)
-    alike = True
-    for band in range(1, L.shape[0]):
-        alike &= (L[band] == L[0]).all()
+    alike = repeats[1:].all()
     bands = 1 if alike else L.shape[0]
     # ∂ln D/∂μ is collected in `variance`
     for band in range(bands):
+        if not alike:
+            _shape(L[band], phase, mu0, mu, by_sum, shape)
         c0, c1, c2, c3 = kind(L[band, 0]), kind(L[band, 1]), kind(L[band, 2]), kind(L[band, 3])
         for p in range(phase.size):
             g = kind(phase[p])
             weight = max(c0 + g * (c1 + g * (c2 + g * c3)), zero)
-            inverse = one / (mu0[p] + mu[p])
-            seeliger = two * weight * inverse
-            variance[p] -= seeliger * inverse / (seeliger + (one - weight))
+            variance[p] -= two * weight * by_sum[p] * by_sum[p] * shape[p]
     share, own = one / kind(bands), one if per_mu0 == zero else zero
     for p in range(phase.size):
         x0, x = mu0[p], mu[p]
         b = variance[p] * share
-        a = b + own / x0
+        a = b + own * by_mu0[p]
         across = a * a * (one - x0 * x0) + b * b * (one - x * x) + two * a * b * (cos_g[p] - x0 * x)
         variance[p] = max(across, zero)
-
-
-@njit(**_OPTIONS)
-def _factor(L, at_target, phase, mu0, mu, factor):  # type: ignore[no-untyped-def]
-    """D at the standard geometry over D here."""
-    kind = factor.dtype.type
-    c0, c1, c2, c3, target = kind(L[0]), kind(L[1]), kind(L[2]), kind(L[3]), kind(at_target)
-    one, two, zero = kind(1), kind(2), kind(0)
-    for p in range(phase.size):
-        g = kind(phase[p])
-        weight = max(c0 + g * (c1 + g * (c2 + g * c3)), zero)
-        factor[p] = target / (mu0[p] * (two * weight / (mu0[p] + mu[p]) + (one - weight)))
 
 
 @njit(**_OPTIONS)

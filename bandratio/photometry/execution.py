@@ -6,7 +6,8 @@ import math
 import threading
 from collections.abc import Callable, Mapping
 from concurrent.futures import ThreadPoolExecutor
-from typing import Any
+from functools import lru_cache
+from typing import Any, NamedTuple
 
 import numpy as np
 import xarray as xr
@@ -23,7 +24,7 @@ _BLOCK_PIXELS = 32_768
 #: Below this many pixels a second thread costs more than it brings.
 _THREAD_PIXELS = 65_536
 #: Pixels at a time where the next step follows at once: bands, sigma and factors of a stretch stay in the second-level cache.
-_CACHED_PIXELS = 24_576
+_CACHED_PIXELS = 49_152
 
 
 def at_once(
@@ -258,31 +259,50 @@ def _compiled(
     from .disk_loop import mixed_law_loop
 
     angles = [planes[name].astype(values.dtype, copy=False) for name in ("incidence", "emission", "phase")]
-    slope_deg = np.asarray(planes.get("slope_sigma", correction.slope_sigma_deg), dtype=float).reshape(-1)
-    largest = [math.degrees(math.acos(least)) for least in (correction.least_mu0, correction.least_mu)]
-    numbers = [
-        1 / correction.target.mu0 if correction.per_mu0 else 0.0,
-        *largest,
-        SLACK_DEG,
-        float(gain.size > 0),
-    ]
-    laws, spread, target = correction.laws, correction.spread, correction.target
+    tables = _tables(correction)
+    slope_deg = planes.get("slope_sigma")
+    slope = tables.slope if slope_deg is None else np.deg2rad(slope_deg.astype(float))
     mixed_law_loop(
         values,
         *angles,
         planes.get("shadow", np.empty(0)).astype(np.uint8, copy=False),
-        np.array([_coefficients(law) for law in laws]),
-        np.array([law.at(target) for law in laws]),
-        np.array([_coefficients(law) for law in spread], dtype=float).reshape(-1, 4),
-        np.array([law.at(target) for law in spread], dtype=float),
-        np.deg2rad(slope_deg),
-        np.array(numbers, dtype=float),
+        tables.L,
+        tables.at_target,
+        tables.spread,
+        tables.spread_at_target,
+        slope,
+        np.append(tables.numbers, float(gain.size > 0)),
         out,
         gain,
         factor,
         flag,
         here.start,
         to,
+    )
+
+
+class _Tables(NamedTuple):
+    """What the compiled loop needs of a correction."""
+
+    L: NDArray
+    at_target: NDArray
+    spread: NDArray
+    spread_at_target: NDArray
+    slope: NDArray
+    numbers: NDArray
+
+
+@lru_cache(maxsize=64)
+def _tables(correction: Correction) -> _Tables:
+    laws, spread, target = correction.laws, correction.spread, correction.target
+    largest = [math.degrees(math.acos(least)) for least in (correction.least_mu0, correction.least_mu)]
+    return _Tables(
+        np.array([_coefficients(law) for law in laws]),
+        np.array([law.at(target) for law in laws]),
+        np.array([_coefficients(law) for law in spread], dtype=float).reshape(-1, 4),
+        np.array([law.at(target) for law in spread], dtype=float),
+        np.deg2rad([correction.slope_sigma_deg]),
+        np.array([1 / correction.target.mu0 if correction.per_mu0 else 0.0, *largest, SLACK_DEG]),
     )
 
 
