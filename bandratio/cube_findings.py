@@ -12,12 +12,16 @@ from numpy.typing import NDArray
 
 from ._checks import listed
 from .cube import is_lazy
+from .registration import band_shifts
 
 __all__ = ["Findings", "check_cube"]
 
 #: A lazy cube of more values than this is sampled (2 GiB of float32 would take a while to read).
 _SAMPLED_ABOVE = 1 << 26
 _SAMPLE_BLOCKS = 16
+#: A shift between bands is looked for in the middle of the picture [pixel], where there are few enough bands to have
+#: been taken one after another, and told where it is larger than this [pixel], three times what it is known to.
+_MIDDLE, _LEAST_SIDE, _MOST_BANDS, _SHIFT_TOLD = 1024, 64, 32, 0.1
 
 
 class Findings(list[str]):
@@ -33,7 +37,7 @@ def check_cube(cube: xr.DataArray, *, full: bool | None = None) -> Findings:
 
     Percent instead of fraction, scaled integers never unscaled, negative and above-one values, infinite
     values, constant or empty bands, saturation at one value, bands with different missing masks, and
-    wavelengths in micrometres, out of order or given twice.
+    wavelengths in micrometres, out of order or given twice, bands shifted against each other.
 
     Parameters
     ----------
@@ -82,7 +86,31 @@ def check_cube(cube: xr.DataArray, *, full: bool | None = None) -> Findings:
     if sampled:
         coverage = f"a sample of {tally.pixels:,} of {total:,} pixels was read; full=True reads all"
         of_values = [f"{sentence} (counted in a sample of {tally.pixels:,} pixels)" for sentence in of_values]
-    return Findings([*sentences, *of_values], coverage)
+    return Findings([*sentences, *of_values, *_of_shifts(cube, _band_names(cube))], coverage)
+
+
+def _of_shifts(cube: xr.DataArray, names: list[str]) -> Iterator[str]:
+    """Bands that do not lie on each other, seen in the middle of the picture."""
+    if (
+        cube.ndim != 3
+        or cube.shape[0] < 2
+        or min(cube.shape[1:]) < _LEAST_SIDE
+        or cube.shape[0] > _MOST_BANDS
+    ):
+        return
+    middle = tuple(
+        slice(max((size - _MIDDLE) // 2, 0), max((size - _MIDDLE) // 2, 0) + _MIDDLE)
+        for size in cube.shape[1:]
+    )
+    values = np.asarray(cube[(slice(None), *middle)].values, dtype=float)
+    reference = values.shape[0] // 2
+    for name, (down, across) in zip(names, band_shifts(values, reference).tolist(), strict=True):
+        if max(abs(down), abs(across)) > _SHIFT_TOLD:
+            yield (
+                f"band {name} is shifted by {down:+.2f} pixels along rows and {across:+.2f} along columns against "
+                f"band {names[reference]}, which makes slopes out of edges; register the bands, or take the shift into "
+                "sigma with br.add_misregistration"
+            )
 
 
 def _band_names(cube: xr.DataArray) -> list[str]:

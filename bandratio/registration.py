@@ -13,6 +13,11 @@ _TILES_PER_SIDE = 3
 _SMALLEST = 16
 #: Spatial frequencies above this are mostly noise and aliasing in a resampled picture [cycles per pixel].
 _HIGHEST_FREQUENCY = 0.35
+#: Above this a picture of natural ground holds hardly anything but noise [cycles per pixel].
+_NOISE_FREQUENCY = 0.45
+#: Two bands of one ground agree better than this (independent pictures reach 0.8 at most in trials), and a shift must
+#: be known better than this [pixel] to be told.
+_LEAST_COHERENCE, _MOST_SIGMA = 0.85, 0.03
 
 
 def band_shifts(stack: ArrayLike, reference: int | None = None) -> NDArray[np.float64]:
@@ -29,7 +34,7 @@ def band_shifts(stack: ArrayLike, reference: int | None = None) -> NDArray[np.fl
     -------
     ndarray, shape (band, 2)
         Along rows and columns [pixel]: +0.3 says that a feature lies 0.3 pixels further on in this band. NaN where
-        it cannot be told, for want of structure or of values.
+        it cannot be told to 0.03 pixels, for want of structure or of values.
 
     Raises
     ------
@@ -46,9 +51,10 @@ def band_shifts(stack: ArrayLike, reference: int | None = None) -> NDArray[np.fl
 
     Examples
     --------
-    >>> picture = np.random.default_rng(0).normal(size=(64, 64)).cumsum(0).cumsum(1)
-    >>> band_shifts([picture, np.roll(picture, 2, axis=1)], reference=0).round(1).tolist()[1]
-    [0.0, 2.0]
+    >>> from scipy.ndimage import gaussian_filter
+    >>> ground = gaussian_filter(np.random.default_rng(0).normal(size=(96, 96)), 2)
+    >>> band_shifts([ground[1:, 2:], ground[:-1, :-2]], reference=0).round(1).tolist()[1]
+    [1.0, 2.0]
     """
     bands = np.asarray(stack)
     if bands.ndim != 3:
@@ -128,7 +134,9 @@ def _phase_shift(a: NDArray, b: NDArray, whole: NDArray) -> NDArray | None:
     cross = np.conj(spectra[0]) * spectra[1]
     u, v = np.meshgrid(*(np.fft.fftfreq(size) for size in a.shape), indexing="ij")
     low = (np.hypot(u, v) <= _HIGHEST_FREQUENCY) & ((u != 0) | (v != 0))
-    weight = np.abs(cross) * low
+    weight = np.abs(cross) * low * _signal_share(np.abs(cross), np.hypot(u, v))
+    if not weight.any():
+        return None
     phase = np.where(low, cross / np.maximum(np.abs(cross), 1e-300), 0)
     correlation = np.real(np.fft.ifft2(phase * np.sqrt(weight)))
     peak = np.array(np.unravel_index(np.argmax(correlation), correlation.shape), dtype=float)
@@ -147,7 +155,21 @@ def _phase_shift(a: NDArray, b: NDArray, whole: NDArray) -> NDArray | None:
         shift = shift + change
         if np.abs(change).max() < 1e-4:
             break
-    return shift
+    coherence = float((weight * np.cos(angle)).sum() / weight.sum())
+    # standard error from the phases' own scatter; every frequency stands there twice, as k and −k
+    scatter = np.stack([u * residual, v * residual]).reshape(2, -1)
+    inverse = np.linalg.inv(normal)
+    sigma = np.sqrt(2 * np.diag(inverse @ (scatter @ scatter.T) @ inverse)) / (2 * np.pi)
+    return shift if coherence > _LEAST_COHERENCE and sigma.max() < _MOST_SIGMA else None
+
+
+def _signal_share(power: NDArray, frequency: NDArray) -> NDArray[np.float64]:
+    """Share of signal in the cross-power, alike all round: what exceeds the level of the highest frequencies."""
+    ring = np.minimum((frequency * 100).astype(int), 50)
+    level = np.bincount(ring.ravel(), power.ravel()) / np.maximum(np.bincount(ring.ravel()), 1)
+    floor = power[frequency > _NOISE_FREQUENCY].mean()
+    share = np.maximum(1 - 1.5 * floor / np.maximum(level, 1e-300), 0)
+    return np.asarray(share[ring])
 
 
 def _taper(size: int) -> NDArray[np.float64]:

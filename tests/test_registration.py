@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from scipy.ndimage import fourier_shift
 
+import bandratio as br
 from bandratio.registration import band_shifts, misregistration_sigma
 
 
@@ -80,3 +81,17 @@ def test_sigma_covers_the_error_at_an_edge():
 def test_bad_input(call, message):
     with pytest.raises(ValueError, match=re.escape(message)):
         call()
+
+
+def test_check_cube_reports_the_shift():
+    whole = 0.1 + ground(320, 8)
+    stack = np.stack([whole, moved(whole, (0.0, 1 / 3)), whole, 0.9 * whole])[:, 32:-32, 32:-32]
+    stack = stack + np.random.default_rng(1).normal(scale=0.001, size=stack.shape)
+    cube = br.as_cube(stack, [480, 600, 700, 830])
+    (finding,) = br.check_cube(cube)
+    assert re.match(
+        r"band 600 nm is shifted by [+-]0\.0\d pixels along rows and \+0\.3\d along columns", finding
+    )
+    (lazily,) = br.check_cube(cube.chunk({"y": 100}))
+    assert lazily == finding
+    assert br.check_cube(cube.isel(wavelength=[0, 2, 3])) == []
