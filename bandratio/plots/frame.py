@@ -213,17 +213,20 @@ def _scale_bar(ax: Axes, grid: Grid) -> None:
     left, right, bottom, top = grid.extent
     metres = round_length(abs(right - left) * grid.metres / 4)
     text = f"{metres / 1000:g} km" if metres >= 1000 else f"{metres:g} m"
+    # below the map, where it hides nothing
     bar = AnchoredSizeBar(
         ax.transData,
         metres / grid.metres,
         text,
-        loc="lower left",
-        pad=0.3,
-        borderpad=0.5,
-        sep=3,
-        frameon=True,
+        loc="upper left",
+        bbox_to_anchor=(0, 0),
+        bbox_transform=ax.transAxes,
+        pad=0.1,
+        borderpad=0.3,
+        sep=2,
+        frameon=False,
         size_vertical=abs(top - bottom) * 0.008,
         color="black",
+        label_top=False,
     )
-    bar.patch.set(alpha=0.8, linewidth=0)
     ax.add_artist(bar)

@@ -76,7 +76,7 @@ def plot_histogram(
         _draw(ax, maps[name], values, limits, sigma)
         return ax
     with style():
-        made: Axes = new_axes(height=2.4)
+        made: Axes = new_axes(height=2.7)
         _draw(made, maps[name], values, limits, sigma)
     return made
 
@@ -120,4 +120,4 @@ def _draw(
     ax.set_xlabel(labelled(of))
     ax.set_ylabel("pixels")
     if limits or sigma:
-        ax.legend(loc="best")
+        ax.legend(loc="lower left", bbox_to_anchor=(0, 1), borderaxespad=0.2)
