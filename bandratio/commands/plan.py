@@ -77,7 +77,7 @@ def bands(
     )
     best = ranking.subsets.head(max(show, 1)).copy()
     best["bands"] = [", ".join(f"{band:g}" for band in bands) for bands in best.bands]
-    best["as_good_as_best"] = best.as_good_as_best.map({True: "yes", False: "no"})
+    best["as_good_as_best"] = best.as_good_as_best.map({True: "yes", False: "no"}).fillna("–")
     click.echo(best.rename(columns={"bands": "bands [nm]"}).to_string(float_format="{:.3f}".format))
     click.echo("\ncandidates: best area with and without each, and the band that may stand in for it")
     table = ranking.bands.copy()

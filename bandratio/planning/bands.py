@@ -27,11 +27,14 @@ from .labelled import (
     seen_through,
     with_every_band,
 )
+from .resampling import centred_interval, multiplicities, resampled_areas
 from .separability import best_ratio_orders, contrast_orders, pairs_left_out, ratio_orders
 
 __all__ = ["BandRanking", "FilterComparison", "compare_filter_sets", "rank_bands"]
 
-_RESAMPLES = 2000
+_RESAMPLES = 1000
+#: For the best of many subsets, each of which is trained anew.
+_RANKED_RESAMPLES = 150
 #: Pairs of specimens that are left out one after the other, at most.
 _LARGEST_PAIRS = 150
 _LARGEST_SUBSETS = 60_000
@@ -70,8 +73,8 @@ class BandRanking:
     ----------
     subsets : DataFrame
         Every subset, best first: its bands [nm], cross-validated area under the ROC curve, the best single ratio with
-        its area; for the first 50 the interval; whether it is as good as the best: not told apart from it, or less than
-        0.005 behind.
+        its area; for the first 50 the interval, and whether it is as good as the best: not told apart from it, or less
+        than 0.005 behind.
     bands : DataFrame
         A row for each candidate: the best area with it and without it, and the band that may stand for it.
     optimism : float
@@ -120,7 +123,7 @@ def compare_filter_sets(
     is not favoured for having more bands: bands that only fit the training specimens lose on the others. Gain and
     offset errors of a band count as if new in each specimen, as for a threshold that is carried from one camera to
     another. The sets see the same pairs, and differences are taken pair by pair; their intervals come from a bootstrap
-    over specimens and hold together (Bonferroni).
+    over specimens, with training and test anew in each sample, and hold together (Bonferroni).
 
     References
     ----------
@@ -141,12 +144,14 @@ def compare_filter_sets(
     averaged = {name: seen_through(name, entry, spectra) for name, entry in sets.items()}
     seen = with_every_band(spectra, [cube for cube, _ in averaged.values()])
     first, second = seen_groups(spectra, is_wanted, seen)
-    matrices, rows = {}, []
+    matrices, drawn, rows = {}, {}, []
     for name, (cube, noise) in averaged.items():
         groups = groups_at(cube, noise, first, second)
         pairs = pairs_left_out(groups.counts, _LARGEST_PAIRS)
         whole = np.arange(cube.sizes["wavelength"])[None]
         matrices[name] = contrast_orders(groups, whole, pairs)[0]
+        samples = multiplicities(groups.counts, _RESAMPLES)
+        drawn[name] = resampled_areas(groups, whole, pairs, samples, threads=_cores())[:, 0]
         ratios, orders = ratio_orders(groups)
         right, best = best_ratio_orders(ratios, orders, whole, pairs)
         rows.append(
@@ -158,8 +163,6 @@ def compare_filter_sets(
             }
         )
     areas = pd.DataFrame(rows, index=pd.Index(list(sets), name="set"))
-    weights = pair_weights(groups.counts, pairs, _RESAMPLES)
-    drawn = {name: weights @ right for name, right in matrices.items()}
     limits = [area_limits(drawn[name], areas.area[name], groups.counts) for name in sets]
     areas.insert(2, "lower", [low for low, _ in limits])
     areas.insert(3, "upper", [high for _, high in limits])
@@ -174,15 +177,16 @@ def _differences(matrices: Mapping[str, NDArray], drawn: Mapping[str, NDArray]) 
     tail = 0.05 / 2 / len(both)
     rows = []
     for one, other in both:
-        low, high = np.quantile(drawn[one] - drawn[other], [tail, 1 - tail])
+        difference = float((matrices[one] - matrices[other]).mean())
+        low, high = centred_interval(difference, drawn[one] - drawn[other], tail)
         better = one if low > 0 else other if high < 0 else None
         rows.append(
             {
                 "first": one,
                 "second": other,
-                "difference": float((matrices[one] - matrices[other]).mean()),
-                "lower": float(low),
-                "upper": float(high),
+                "difference": difference,
+                "lower": low,
+                "upper": high,
                 "verdict": f"{better} is better" if better else "not told apart",
             }
         )
@@ -265,22 +269,24 @@ def rank_bands(
 
     area = right.mean(axis=1)
     order = np.lexsort((-ratio_right.mean(axis=1), -area))
-    weights = pair_weights(groups.counts, pairs, _RESAMPLES // 5)
-    drawn = weights @ right.T
-    winners = drawn.argmax(axis=1)
-    optimism = max(float((drawn[np.arange(len(winners)), winners] - area[winners]).mean()), 0.0)
-    against_best = drawn[:, [order[0]]] - drawn
-    same = (np.quantile(against_best, 0.025, axis=0) <= 0) | (area[order[0]] - area < _SAME_AREA)
+    optimism = _optimism(area, pair_weights(groups.counts, pairs, _RESAMPLES // 2) @ right.T)
+    leading = order[:_WITH_INTERVAL]
+    samples = multiplicities(groups.counts, _RANKED_RESAMPLES)
+    drawn = resampled_areas(groups, subsets[leading], pairs, samples, threads=_cores())
     limits = np.full((len(order), 2), np.nan)
-    for place, number in enumerate(order[:_WITH_INTERVAL]):
-        limits[place] = area_limits(drawn[:, number], float(area[number]), groups.counts)
+    same = []
+    for place, number in enumerate(leading):
+        limits[place] = area_limits(drawn[:, place], float(area[number]), groups.counts)
+        behind = float(area[leading[0]] - area[number])
+        low, _ = centred_interval(behind, drawn[:, 0] - drawn[:, place], 0.025)
+        same.append(behind < _SAME_AREA or low <= 0)
     table = pd.DataFrame(
         {
             "bands": [tuple(float(centres[band]) for band in subsets[place]) for place in order],
             "area": area[order],
             "lower": limits[:, 0],
             "upper": limits[:, 1],
-            "as_good_as_best": same[order],
+            "as_good_as_best": pd.array([*same, *[None] * (len(order) - len(same))], dtype="boolean"),
             "best_ratio": [ratio_name(ratios[int(best[place])], centres) for place in order],
             "best_ratio_area": ratio_right.mean(axis=1)[order],
         },
@@ -289,10 +295,16 @@ def rank_bands(
     bands = _band_table(centres, subsets, area, kept)
     findings = [
         f"the best of {len(order)} subsets was chosen on these specimens, which makes its area about {optimism:.3f} too good",
-        f"{int(same.sum())} of {len(order)} subsets are not told apart from the best",
+        f"{sum(same)} of the first {len(leading)} subsets are not told apart from the best",
         *rests_on(groups.counts, pairs, spectra, is_wanted, seen),
     ]
     return BandRanking(table, bands, optimism, tuple(findings))
+
+
+def _optimism(area: NDArray, drawn: NDArray) -> float:
+    """How much the winner of a bootstrap sample loses on the whole, on average."""
+    winners = drawn.argmax(axis=1)
+    return max(float((drawn[np.arange(len(winners)), winners] - area[winners]).mean()), 0.0)
 
 
 def _place(wavelength: float, centres: NDArray) -> int:

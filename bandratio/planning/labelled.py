@@ -14,6 +14,7 @@ from ..detection.labelled import labelled_groups, specimen_names
 from ..detection.specimens import area_interval, bootstrap_weights
 from ..noise import Noise
 from ..spectra import band_average
+from .resampling import centred_interval
 from .separability import Groups, Pairs
 
 __all__ = [
@@ -135,9 +136,9 @@ def pair_weights(counts: tuple[int, int], pairs: Pairs, resamples: int) -> NDArr
 
 def area_limits(drawn: NDArray, area: float, counts: tuple[int, int]) -> tuple[float, float]:
     """Interval of an area: the bootstrap's, widened to the one that holds for few specimens."""
-    low, high = np.quantile(drawn, [0.025, 0.975])
+    low, high = centred_interval(area, drawn, 0.025)
     few_low, few_high = area_interval(float(np.clip(area, 0, 1)), *counts)
-    return min(float(low), few_low), max(float(high), few_high)
+    return max(min(low, few_low), 0.0), min(max(high, few_high), 1.0)
 
 
 def ratio_name(ratio: tuple[int, int], centres: NDArray) -> str:

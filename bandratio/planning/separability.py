@@ -21,7 +21,18 @@ from itertools import combinations
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["Groups", "Pairs", "best_ratio_orders", "contrast_orders", "pairs_left_out", "ratio_orders"]
+__all__ = [
+    "Groups",
+    "Pairs",
+    "best_contrast",
+    "best_ratio_orders",
+    "contrast_orders",
+    "pairs_left_out",
+    "ratio_orders",
+    "right_order",
+    "specimen_moments",
+    "with_ridge",
+]
 
 #: Part of the contrasts' mean variance that is added to each band's, so that few specimens give stable weights
 #: (common practice, no source).
@@ -113,7 +124,7 @@ def contrast_orders(
     ndarray, shape (subset, pair)
         Their mean over pairs is the cross-validated area under the ROC curve.
     """
-    moments = [_moments(groups, group) for group in (0, 1)]
+    moments = [specimen_moments(groups, group) for group in (0, 1)]
     result = np.empty((subsets.shape[0], pairs.wanted.size))
 
     def run(number: int) -> None:
@@ -126,17 +137,17 @@ def contrast_orders(
         variance = (va[:, None] + vb[None]).reshape(-1, a.shape[1])
         for start in range(0, subsets.shape[0], _BLOCK):
             block = subsets[start : start + _BLOCK]
-            w = _contrast(delta[block], spread[block[:, :, None], block[:, None, :]])
+            w = best_contrast(delta[block], spread[block[:, :, None], block[:, None, :]])
             d = np.einsum("qk,pqk->pq", w, difference[:, block])
             v = np.einsum("qk,pqk->pq", w**2, variance[:, block])
-            result[start : start + _BLOCK, number] = _right(d, v).mean(axis=0)
+            result[start : start + _BLOCK, number] = right_order(d, v).mean(axis=0)
 
     with ThreadPoolExecutor(max(threads, 1)) as pool:
         list(pool.map(run, range(pairs.wanted.size)))
     return result
 
 
-def _moments(groups: Groups, group: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def specimen_moments(groups: Groups, group: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Each specimen's mean and its mean outer product with the noise's variance on the diagonal."""
     x, weights = groups.logs[group], groups.weights(group)
     count, bands = groups.counts[group], x.shape[1]
@@ -161,25 +172,32 @@ def _training(
         covariances.append(second - np.outer(of_group, of_group))
         degrees.append(kept)
     pooled = (degrees[0] * covariances[0] + degrees[1] * covariances[1]) / sum(degrees)
-    contrast_variance = np.trace(pooled) / len(pooled) - pooled.mean()
-    ridge = _RIDGE * max(float(contrast_variance), 0.0) + 1e-12
-    return means[0] - means[1], pooled + ridge * np.eye(len(pooled))
+    return means[0] - means[1], with_ridge(pooled)
 
 
-def _contrast(delta: NDArray, spread: NDArray) -> NDArray[np.float64]:
+def with_ridge(pooled: NDArray) -> NDArray[np.float64]:
+    """Covariances, shape (…, band, band), with a part of the contrasts' mean variance added to each band's."""
+    bands = pooled.shape[-1]
+    contrast_variance = np.trace(pooled, axis1=-2, axis2=-1) / bands - pooled.mean(axis=(-2, -1))
+    ridge = _RIDGE * np.maximum(contrast_variance, 0.0) + 1e-12
+    added: NDArray[np.float64] = pooled + ridge[..., None, None] * np.eye(bands)
+    return added
+
+
+def best_contrast(delta: NDArray, spread: NDArray) -> NDArray[np.float64]:
     """Weights that maximise (w·δ)²/(w'Σw) among those that add up to zero.
 
-    ``w = Σ⁻¹δ − (1'Σ⁻¹δ / 1'Σ⁻¹1)·Σ⁻¹1``, for many subsets at once: δ of shape (subset, k), Σ (subset, k, k).
+    ``w = Σ⁻¹δ − (1'Σ⁻¹δ / 1'Σ⁻¹1)·Σ⁻¹1``, for many subsets at once: δ of shape (…, k), Σ (…, k, k).
     """
     right = np.stack([delta, np.ones_like(delta)], axis=-1)
     solved = np.linalg.solve(spread, right)
     of_delta, of_one = solved[..., 0], solved[..., 1]
-    along = of_delta.sum(axis=1, keepdims=True) / of_one.sum(axis=1, keepdims=True)
+    along = of_delta.sum(axis=-1, keepdims=True) / of_one.sum(axis=-1, keepdims=True)
     weights: NDArray[np.float64] = of_delta - along * of_one
     return weights
 
 
-def _right(difference: NDArray, variance: NDArray) -> NDArray[np.float64]:
+def right_order(difference: NDArray, variance: NDArray) -> NDArray[np.float64]:
     """Φ(difference/σ): probability that noise leaves the order as it is; a tie counts half."""
     from scipy.special import ndtr
 
@@ -210,7 +228,7 @@ def ratio_orders(groups: Groups) -> tuple[list[tuple[int, int]], NDArray[np.floa
     for number, (p, q) in enumerate(ratios):
         a, b = (x[:, p] - x[:, q] for x in groups.logs)
         va, vb = (v[:, p] + v[:, q] for v in groups.variances)
-        right = _right(a[:, None] - b[None, :], va[:, None] + vb[None, :])
+        right = right_order(a[:, None] - b[None, :], va[:, None] + vb[None, :])
         orders[number] = average[0] @ right @ average[1].T
     return ratios, orders
 

@@ -8,6 +8,8 @@ import xarray as xr
 from scipy.stats import norm
 
 import bandratio as br
+from bandratio.planning.labelled import groups_at
+from bandratio.planning.resampling import resampled_areas
 from bandratio.planning.separability import (
     Groups,
     best_ratio_orders,
@@ -149,17 +151,28 @@ def test_drawn_pairs_use_every_specimen_about_equally():
 def test_chance_gives_an_area_of_one_half_for_small_and_large_sets():
     """Groups that do not differ: a set of eight bands must not win over one of two by fitting noise."""
     generator = np.random.default_rng(3)
-    sets = {"two": (CENTRES[::4], None, None), "eight": (CENTRES, None, None)}
-    areas = np.array(
-        [
-            br.compare_filter_sets(sets, rocks(generator, 10, 10), "wanted", "unwanted").areas.area.to_numpy()
-            for _ in range(60)
-        ]
-    )
+    areas = np.empty((60, 2))
+    for scene in areas:
+        cube = br.band_average(rocks(generator, 10, 10), CENTRES)
+        groups = groups_at(cube, None, np.arange(10), np.arange(10, 20))
+        pairs = pairs_left_out(groups.counts, 100)
+        scene[:] = [contrast_orders(groups, np.array([bands]), pairs).mean() for bands in ([0, 4], range(8))]
     for column in range(2):
         error = areas[:, column].std() / np.sqrt(60)
         assert abs(areas[:, column].mean() - 0.5) < 3.5 * error
         assert error < 0.03
+
+
+def test_sets_that_are_alike_are_seldom_told_apart():
+    """Both see nothing, so any verdict is false. Drawing only the tested pairs anew gave one in five."""
+    generator = np.random.default_rng(20)
+    sets = {"a": ([600.0, 640.0, 700.0], None, None), "b": ([600.0, 660.0, 700.0], None, None)}
+    false = sum(
+        br.compare_filter_sets(sets, rocks(generator, 8, 8), "wanted", "unwanted").differences.verdict[0]
+        != "not told apart"
+        for _ in range(40)
+    )
+    assert false <= 40 * (0.05 + 3.5 * np.sqrt(0.05 * 0.95 / 40))
 
 
 def test_paired_differences_find_the_better_set_and_no_false_one():
@@ -199,6 +212,22 @@ def test_differences_hold_together():
     assert not any("pairs of specimens were tried" in finding for finding in found.findings)
     assert (found.differences.lower <= found.differences.difference).all()
     assert (found.differences.difference <= found.differences.upper).all()
+
+
+def test_drawing_each_specimen_once_is_the_cross_validation_itself():
+    generator = np.random.default_rng(21)
+    spectra = rocks(generator, 6, 5, shift=0.1)
+    logs = np.log(br.band_average(spectra, CENTRES[:5]).values)
+    variances = generator.uniform(1e-5, 1e-4, logs.shape)
+    groups = Groups((logs[:6], logs[6:]), (variances[:6], variances[6:]), (np.arange(6), np.arange(5)))
+    pairs = pairs_left_out(groups.counts, 100)
+    subsets = np.array(list(combinations(range(5), 3)))
+    once = (np.ones((1, 6)), np.ones((1, 5)))
+    expected = contrast_orders(groups, subsets, pairs).mean(axis=1)
+    np.testing.assert_allclose(resampled_areas(groups, subsets, pairs, once)[0], expected, rtol=1e-8)
+    # copies of a specimen leave together: none of a group that is one specimen alone can be tried
+    alone = (np.array([[6.0, 0, 0, 0, 0, 0]]), np.ones((1, 5)))
+    assert np.isnan(resampled_areas(groups, subsets, pairs, alone)).all()
 
 
 # ---- ranking
