@@ -19,8 +19,9 @@ __all__ = ["PageData", "page_data"]
 #: Bytes of pictures on a page; with the points and the libraries it stays below 15 MB.
 _PICTURE_BYTES = 7_000_000
 _MOST_PICTURE_PIXELS = 250_000
-_POINTS = 12_000
-_CANDIDATE_POINTS = 8_000
+#: Bytes of the points, and how many there are at most: pixels spread over the scene, and candidates.
+_POINT_BYTES = 3_000_000
+_POINTS, _CANDIDATE_POINTS = 12_000, 8_000
 
 
 #: What the views show at first, where it is there.
@@ -155,15 +156,17 @@ def _points(
     """Pixels spread evenly over the scene, and the candidates, all of them where they are few."""
     first = maps[names[0]]
     rows, columns = first.shape
-    step = max(1, math.ceil(math.sqrt(rows * columns / _POINTS)))
+    share = min(1.0, _POINT_BYTES / ((_POINTS + _CANDIDATE_POINTS) * (2 * len(names) + 12) * 4 * 4 / 3))
+    most = int(share * _CANDIDATE_POINTS)
+    step = max(1, math.ceil(math.sqrt(rows * columns / (share * _POINTS))))
     row, column = (axis.ravel() for axis in np.mgrid[step // 2 : rows : step, step // 2 : columns : step])
     left_out = 0
     if flag is not None:
         codes = [code for code, word in words.items() if word.endswith("candidate")]
         found_row, found_column = np.nonzero(np.isin(flag, codes))
-        if found_row.size > _CANDIDATE_POINTS:
-            chosen = np.linspace(0, found_row.size - 1, _CANDIDATE_POINTS).astype(int)
-            left_out = found_row.size - _CANDIDATE_POINTS
+        if found_row.size > most:
+            chosen = np.linspace(0, found_row.size - 1, most).astype(int)
+            left_out = found_row.size - most
             found_row, found_column = found_row[chosen], found_column[chosen]
         flat = np.unique(np.concatenate([row * columns + column, found_row * columns + found_column]))
         row, column = flat // columns, flat % columns

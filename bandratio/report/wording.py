@@ -18,8 +18,8 @@ __all__ = [
     "table_html",
 ]  # fmt: skip
 
-#: Rows of a table of regions; the rest is in the file of regions.
-_MOST_ROWS = 500
+#: Rows and cells of a table of regions; the rest is in the file of regions.
+_MOST_ROWS, _MOST_CELLS = 500, 20_000
 
 _READABLE = {
     "region": "region", "kind": "kind", "n_pixels": "pixels", "area_map": "area [map unit²]",
@@ -164,7 +164,7 @@ def region_section(table: pd.DataFrame | None) -> str:
     heading = '<section aria-labelledby="regions-title"><h2 id="regions-title">Candidate regions</h2>'
     if len(table) == 0:
         return f"{heading}<p>There are none.</p></section>"
-    shown = table.head(_MOST_ROWS)
+    shown = table.head(min(_MOST_ROWS, _MOST_CELLS // table.shape[1]))
     note = f"<p>The {len(shown):,} largest of {len(table):,}.</p>" if len(table) > len(shown) else ""
     header = ["", *(_heading(str(name)) for name in shown.columns)]
     rows = []

@@ -95,6 +95,21 @@ def test_a_large_scene_stays_small_and_says_so(tmp_path):
     assert re.search(r"The 500 largest of [\d,]+\.", text)
 
 
+def test_very_many_parameters_stay_small(tmp_path):
+    rng = np.random.default_rng(0)
+    R = rng.normal(0.2, 0.05, (300, 300)).astype(np.float32)
+    cube = br.as_cube(np.stack([0.9 * R, R]), [600, 700])
+    names = {f"parameter_{place}": br.BandRatio({600: 1, 700: place}, {700: 1}) for place in range(80)}
+    maps = br.parameters(
+        cube,
+        NOISE,
+        ["reflectance_700", *[br.BandRatio(r.numerator, r.denominator, name=n) for n, r in names.items()]],
+    )
+    flags = br.pyroclastic_flags(maps, brighter_than=0.28)
+    page = br.write_report(maps, tmp_path / "many.html", flags=flags, cube=cube, noise=NOISE)
+    assert page.stat().st_size < 15e6
+
+
 def test_maps_in_degrees_and_with_gaps(tmp_path):
     cube, _, _ = maps_and_flags()
     cube = cube.copy()
