@@ -1,6 +1,7 @@
 """The README is true: its scripts run as pasted, one after the other, and its commands are those of the checks."""
 
 import re
+import shlex
 import subprocess
 import sys
 from pathlib import Path
@@ -20,6 +21,17 @@ def test_scripts_run_as_pasted(tmp_path):
             capture_output=True, text=True, cwd=tmp_path, check=False,
         )  # fmt: skip
         assert answer.returncode == 0, f"{script}\n{answer.stderr}"
+
+
+def test_the_commands_run_on_the_demo(tmp_path):
+    """Each line of the command line section, on a small demo scene."""
+    blocks = re.findall(r"```sh\n(.*?)```", README, re.DOTALL)
+    lines = [line for block in blocks for line in block.splitlines() if line.startswith("bandratio ")]
+    assert len(lines) >= 5
+    for line in ["bandratio demo corvane --side 160", *lines]:
+        words = [sys.executable, "-m", *shlex.split(line)]
+        answer = subprocess.run(words, capture_output=True, text=True, cwd=tmp_path, check=False)
+        assert answer.returncode == 0, f"{line}\n{answer.stderr}{answer.stdout}"
 
 
 def test_the_test_command_is_the_one_that_the_checks_run():

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -18,7 +18,7 @@ from ..plots import plot_ice_plane, plot_map
 from ..pyroclastic import pyroclastic_flags
 from ..report import write_report
 from .basin import MATERIALS, make_basin
-from .scene import NOISE, see
+from .scene import BANDS_NM, NOISE, see
 from .shots import CALIBRATION, range_counts
 
 if TYPE_CHECKING:
@@ -26,7 +26,8 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
 __all__ = [
-    "LIMITS", "DemoResult", "draw_overview", "ground_list", "normalised_scene", "run_demo", "truth_table", "write_scene",
+    "LIMITS", "DemoResult", "draw_overview", "ground_list", "normalised_scene", "run_demo", "truth_table",
+    "write_instruments", "write_scene",
 ]  # fmt: skip
 
 
@@ -35,7 +36,7 @@ __all__ = [
 LIMITS = {"brighter_than": 0.24, "darker_than": 0.10, "flatter_than": 7.0}
 _FILES = (
     "scene.tif", "angles.tif", "maps.tif", "flags.tif", "shots.parquet", "ice.nc", "truth.csv",
-    "corvane.png", "ice.png", "corvane.html",
+    "corvane.png", "ice.png", "corvane.html", "noise.csv", "lidar.csv",
 )  # fmt: skip
 
 
@@ -58,7 +59,8 @@ def run_demo(folder: str | Path = "corvane", *, side: int = 640, overwrite: bool
     folder : str or Path
         Where to write: the cube and its geometry (``scene.tif``, ``angles.tif``), the parameter maps (``maps.tif``),
         candidate pyroclastic pixels (``flags.tif``), lidar returns and candidate ice (``shots.parquet``, ``ice.nc``), what
-        was planted and what was found (``truth.csv``), two pictures and one page.
+        is known of both instruments (``noise.csv``, ``lidar.csv``), what was planted and what was found (``truth.csv``),
+        two pictures and one page.
     side : int
         Pixels along each side of the scene.
     overwrite : bool
@@ -92,6 +94,8 @@ def run_demo(folder: str | Path = "corvane", *, side: int = 640, overwrite: bool
     flags = pyroclastic_flags(maps, **LIMITS)
     write_maps(flags, files["flags.tif"], overwrite=overwrite)
 
+    write_instruments(files["noise.csv"], files["lidar.csv"], overwrite=overwrite)
+
     returns = range_counts(basin)
     with beside(files["shots.parquet"], overwrite=overwrite) as unfinished:
         returns.to_dataframe().reset_index(drop=True).to_parquet(unfinished)
@@ -119,6 +123,22 @@ def run_demo(folder: str | Path = "corvane", *, side: int = 640, overwrite: bool
         overwrite=overwrite,
     )
     return DemoResult(maps, flags, ice, truth, list(files.values()))
+
+
+def write_instruments(noise_path: Path, lidar_path: Path, *, overwrite: bool = False) -> None:
+    """What is known of the camera and of the lidar, as the tables that the commands read."""
+    import pandas as pd
+
+    parts = {
+        name: getattr(NOISE, name) for name in ("random", "shot", "band_gain", "band_offset", "common_gain")
+    }
+    noise = pd.DataFrame({"wavelength": BANDS_NM}).assign(**parts)
+    channels = {"red": CALIBRATION.red, "infrared": CALIBRATION.infrared}
+    lidar = pd.DataFrame([{"channel": name, **asdict(channel)} for name, channel in channels.items()])
+    lidar = lidar.dropna(axis="columns").assign(units=CALIBRATION.units, source=CALIBRATION.source)
+    for table, path in ((noise, noise_path), (lidar, lidar_path)):
+        with beside(path, overwrite=overwrite) as unfinished:
+            table.to_csv(unfinished, index=False)
 
 
 def ground_list() -> list[str]:
