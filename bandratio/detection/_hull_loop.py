@@ -40,7 +40,7 @@ def facing_edge(red: float, hull: int, knots: Floats, cells: Ints, cell_grid: Fl
     """Return the facing edge that lies above all others at this red albedo: by its cell, then corner by corner."""
     # a cell to the left, so that rounding at a cell's end does no harm
     cell = min(max((red - cell_grid[hull, 0]) * cell_grid[hull, 1] - 1, 0.0), cells.shape[1] - 1.0)
-    edge: int = cells[hull, int(cell)]
+    edge = int(cells[hull, int(cell)])
     while red > knots[edge]:
         edge += 1
     return edge

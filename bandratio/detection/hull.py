@@ -38,8 +38,8 @@ INTERVALS = 64
 #: Width of the bins of incidence [degree], and the steepest one a hull is built for.
 BIN_DEG = 2.5
 STEEPEST_DEG = 80.0
-#: Cells of red by which the facing edge above a point is found.
-CELLS = 256
+#: Cells of red by which the facing edge above a point is found; so many that hardly one holds a corner.
+CELLS = 2048
 #: Points nearer to each other than this are one point: far below any measurement, far above rounding.
 _ONE_POINT = 1e-9
 
@@ -260,7 +260,7 @@ class PackedHulls(NamedTuple):
     slopes: NDArray[np.float64]
     intercepts: NDArray[np.float64]
     knots: NDArray[np.float64]
-    cells: NDArray[np.int64]  # (hull, CELLS): the facing edge above the left end of each cell of red
+    cells: NDArray[np.int32]  # (hull, CELLS): the facing edge above the left end of each cell of red
     cell_grid: NDArray[np.float64]  # (hull, 2): red where the cells begin, cells in a unit of red
 
 
@@ -311,7 +311,8 @@ class HullsByIncidence:
                 [
                     first + np.searchsorted(hull.knots, ends)
                     for hull, first, ends in zip(self.hulls, facing_starts, left_ends, strict=False)
-                ]
+                ],
+                dtype=np.int32,
             ),
             cell_grid=grid,
             slopes=np.concatenate([hull.slopes for hull in self.hulls]),
