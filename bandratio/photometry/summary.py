@@ -67,7 +67,7 @@ def geometry_summary(
     if told["slope_sigma_deg"]:
         sigma = told["slope_sigma_deg"]
         parts.append(
-            f"a slope error of {sigma:g}°" if isinstance(sigma, float | int) else "a map of slope errors"
+            f"a slope error of {sigma:.2g}°" if isinstance(sigma, float | int) else "a map of slope errors"
         )
     if told["spread"]:
         parts.append(f"the spread to {listed(_READABLE.get(law, law) for law in told['spread'])}")
