@@ -1,82 +1,120 @@
 """Fifty times: a run is killed at a random moment and resumed; the output must be that of an undisturbed run.
 
-Moments are drawn over the whole life of the process, from its start to after its end, so that kills also fall
-into the laying out, the finishing and the moving. Half of the runs write Zarr, half a GeoTIFF.
+Every run is a process of its own, parted from one that has everything imported, so that the moments, which are drawn
+over the whole life of an undisturbed run and a little more, fall into the work: the laying out, the blocks, the
+finishing, the moving. Half of the runs write Zarr, half a GeoTIFF.
 """
 
 from __future__ import annotations
 
+import os
 import random
 import shutil
 import signal
-import subprocess
 import sys
 import tempfile
 import time
 from collections import Counter
+from collections.abc import Callable
 from pathlib import Path
 
+import dask.array
 import numpy as np
+import rasterio
+import rioxarray
+import zarr
 from scenes import NOISE, WAVELENGTHS, tiled_geotiff
 
 import bandratio as br
+import bandratio.files.block_shape
+import bandratio.files.geotiff
+import bandratio.files.maps
+import bandratio.files.raster_cubes
+import bandratio.kernel
+import bandratio.maps
+from bandratio.__main__ import main as bandratio_main
 
+LOADED = (dask.array, rasterio, rioxarray, zarr)
 KILLS = 50
+#: Smaller blocks than usual, so that a small scene has several: 12.
+BLOCK_PIXELS = 1 << 18
 
 
-def command(scene: Path, output: Path, *more: str) -> list[str]:
-    return [sys.executable, "-m", "bandratio", "map", str(scene), "-o", str(output), "--wavelengths", WAVELENGTHS,
-            *NOISE, *more]  # fmt: skip
+def start(work: Callable[[], object]) -> int:
+    """Do some work in a child process; its id. No thread may run in this one, or it would be lost in the child."""
+    process = os.fork()
+    if process:
+        return process
+    code = 1
+    try:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), 1)
+        code = 0 if work() in (None, True) else 3
+    except SystemExit as ended:
+        code = ended.code if isinstance(ended.code, int) else 0
+    finally:
+        os._exit(code)
+
+
+def ended_well(process: int) -> bool:
+    return os.waitstatus_to_exitcode(os.waitpid(process, 0)[1]) == 0
+
+
+def mapped(scene: Path, output: Path, *more: str) -> Callable[[], object]:
+    arguments = ["map", str(scene), "-o", str(output), "--wavelengths", WAVELENGTHS, *NOISE, *more]
+    return lambda: bandratio_main(arguments)
 
 
 def same(one: Path, other: Path) -> bool:
-    first, second = br.open_maps(one), br.open_maps(other)
-    return set(first) == set(second) and all(
-        np.array_equal(first[name].values.view(np.uint32), second[name].values.view(np.uint32))
-        for name in first
-    )
+    def compare() -> bool:
+        first, second = br.open_maps(one), br.open_maps(other)
+        return set(first) == set(second) and all(
+            np.array_equal(first[name].values.view(np.uint32), second[name].values.view(np.uint32))
+            for name in first
+        )
+
+    return ended_well(start(compare))
 
 
 def main() -> None:
     kills = int(sys.argv[1]) if len(sys.argv) > 1 else KILLS
+    bandratio.files.block_shape._PIXELS = BLOCK_PIXELS
     draw = random.Random(5)
     outcomes: Counter[str] = Counter()
     with tempfile.TemporaryDirectory() as folder:
         work = Path(folder)
-        scene = tiled_geotiff(work / "scene.tif", 4096, 3072)
+        scene = tiled_geotiff(work / "scene.tif", 2048, 1536)
         lives = {}
         for ending in (".zarr", ".tif"):
-            start = time.perf_counter()
-            subprocess.run(command(scene, work / f"undisturbed{ending}"), check=True, capture_output=True)
-            lives[ending] = time.perf_counter() - start
+            for _ in range(2):  # the first may compile
+                began = time.perf_counter()
+                if not ended_well(start(mapped(scene, work / f"undisturbed{ending}", "--overwrite"))):
+                    raise SystemExit("the undisturbed run failed")
+                lives[ending] = time.perf_counter() - began
         for k in range(kills):
             ending = (".zarr", ".tif")[k % 2]
             output = work / f"maps{ending}"
             unfinished = output.with_name(f".{output.name}.unfinished")
-            process = subprocess.Popen(
-                command(scene, output), stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL
-            )
-            time.sleep(draw.uniform(0.1, 1.05) * lives[ending])
-            process.send_signal(signal.SIGKILL)
-            ended = process.wait() == 0
-            blocks = len(list((unfinished / "done").glob("*.npy"))) if (unfinished / "done").is_dir() else 0
+            process = start(mapped(scene, output))
+            time.sleep(draw.uniform(0.05, 1.05) * lives[ending])
+            os.kill(process, signal.SIGKILL)
+            whole = ended_well(process)
+            done = unfinished / "done"
+            blocks = len(list(done.glob("*.npy"))) if done.is_dir() else 0
             moment = (
-                "after its end" if ended
+                "after its end" if whole
                 else "while it tidied up" if output.exists()
                 else "before its first block" if not blocks
                 else "after some of its blocks" if blocks < 12
                 else "after its last block"
             )  # fmt: skip
-            if not ended:
-                if output.exists() and not same(output, work / f"undisturbed{ending}"):
-                    raise SystemExit(f"kill {k + 1}: something half done was under the final name")
-                if not (output.exists() and not unfinished.exists()):
-                    done = subprocess.run(
-                        command(scene, output, "--resume"), capture_output=True, text=True, check=False
-                    )
-                    if done.returncode:
-                        raise SystemExit(f"kill {k + 1} ({moment}): not resumed: {done.stderr}")
-            if not same(output, work / f"undisturbed{ending}") or unfinished.exists():
+            if output.exists() and not same(output, work / f"undisturbed{ending}"):
+                raise SystemExit(f"kill {k + 1}: something half done was under the final name")
+            # nothing is left to do where the output is in place and nothing lies beside it
+            if (unfinished.exists() or not output.exists()) and not ended_well(
+                start(mapped(scene, output, "--resume"))
+            ):
+                raise SystemExit(f"kill {k + 1} ({moment}): not resumed")
+            if unfinished.exists() or not same(output, work / f"undisturbed{ending}"):
                 raise SystemExit(f"kill {k + 1} ({moment}): the output differs, or something was left")
             outcomes[moment] += 1
             print(f"  {k + 1}: {ending} killed {moment}, same result", flush=True)

@@ -53,7 +53,8 @@ class BinCounts:
         # the table is kept for the thread's next array: fresh memory costs as much as the counting
         if not hasattr(_kept, "table"):
             _kept.table = np.zeros(_BINS, np.uint32)
-        filled, missing = _count(bits, _kept.table)
+        missing = _count(bits, _kept.table)
+        filled = np.count_nonzero(_kept.table)
         bins, counts = np.empty(filled, np.uint32), np.empty(filled, np.uint32)
         _take(_kept.table, bins, counts)
         return cls(bins, counts, int(missing))
@@ -100,8 +101,8 @@ def _edges(k: int) -> tuple[float, float]:
 
 @njit(cache=True, nogil=True)
 def _count(bits, table):  # type: ignore[no-untyped-def]
-    """Count into an empty table; how many bins were filled, and how many values were missing."""
-    missing = filled = 0
+    """Count into a table; how many values were missing."""
+    missing = 0
     for i in range(bits.size):
         b = bits[i]
         if (b & np.uint32(0x7FFFFFFF)) >= np.uint32(0x7F800000):
@@ -109,11 +110,8 @@ def _count(bits, table):  # type: ignore[no-untyped-def]
             continue
         # negative numbers come before positive ones, the largest magnitude first
         ordered = ~b if b >> np.uint32(31) else b | np.uint32(0x80000000)
-        k = ordered >> np.uint32(14)
-        before = table[k]
-        filled += before == 0
-        table[k] = before + np.uint32(1)
-    return filled, missing
+        table[ordered >> np.uint32(14)] += np.uint32(1)
+    return missing
 
 
 @njit(cache=True, nogil=True)
