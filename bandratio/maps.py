@@ -111,7 +111,11 @@ def parameters(
     else:
         planes, cube = _in_one_pass(made, noise, list(ratios.values()), centres, tolerance, parts)
     dims = tuple(dim for dim in cube.dims if dim != "wavelength")
-    coords = {name: c for name, c in cube.coords.items() if "wavelength" not in c.dims}
+    # what each pixel was multiplied by and how well that is known has entered the sigmas, and is of no more use
+    used_up = ("pixel_gain", "brightness_factor")
+    coords = {
+        name: c for name, c in cube.coords.items() if "wavelength" not in c.dims and name not in used_up
+    }
     # where the map projection stands under another name than spatial_ref, every map must say so
     mapping = {key: cube.encoding[key] for key in ("grid_mapping",) if key in cube.encoding}
     variables = {}

@@ -9,6 +9,7 @@ from typing import Any
 import xarray as xr
 
 from .._checks import listed
+from .normalise import masked_pixels
 
 __all__ = ["geometry_summary"]
 
@@ -32,7 +33,8 @@ def geometry_summary(
     labelled : DataArray or Dataset
         A normalised cube or its maps.
     masked : mapping of str to int, optional
-        Result of `masked_pixels`; None: what the attribute `masked_pixels` says, where maps from the command line have it.
+        Result of `masked_pixels`; None: what the attribute of that name says, which maps from the command line have, or
+        counted where the flags are in memory.
 
     Returns
     -------
@@ -77,6 +79,12 @@ def geometry_summary(
         )
     if masked is None and "masked_pixels" in labelled.attrs:
         masked = json.loads(labelled.attrs["masked_pixels"])
+    elif (
+        masked is None
+        and "geometry_flag" in labelled.coords
+        and labelled.coords["geometry_flag"].chunks is None
+    ):
+        masked = masked_pixels(labelled)
     if masked is not None:
         total, used = sum(masked.values()), masked.get("used", 0)
         reasons = listed(

@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 import xarray as xr
 
+from ..photometry import geometry_summary
 from .pictures import PageData
 
 __all__ = [
@@ -216,6 +217,12 @@ def parameter_table(maps: xr.Dataset, data: PageData) -> str:
 def provenance(maps: xr.Dataset, flags: xr.Dataset | None, versions: dict[str, str]) -> str:
     """Noise, thresholds, attributes of the files, and versions, as a list of terms."""
     told: list[tuple[str, str]] = [("noise", str(maps.attrs.get("noise", "not said in the maps")))]
+    done = {"noise", "thresholds"}
+    try:
+        told.append(("geometry", "; ".join(geometry_summary(maps)).removeprefix("geometry: ")))
+        done |= {"normalisation", "masked_pixels"}
+    except (ValueError, TypeError, KeyError, AttributeError):
+        told.append(("geometry", "cannot be read from the maps' attributes"))
     if flags is not None and "thresholds" in flags.attrs:
         try:
             for name, limit in json.loads(flags.attrs["thresholds"]).items():
@@ -228,7 +235,6 @@ def provenance(maps: xr.Dataset, flags: xr.Dataset | None, versions: dict[str, s
                 )
         except (ValueError, TypeError, KeyError, AttributeError):
             told.append(("thresholds", str(flags.attrs["thresholds"])))
-    done = {"noise", "thresholds"}
     for title, dataset in (("maps", maps), ("flags", flags)):
         if dataset is not None:
             told += [

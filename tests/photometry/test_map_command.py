@@ -5,6 +5,7 @@ import json
 import numpy as np
 import pytest
 import rasterio
+import xarray as xr
 
 import bandratio as br
 from bandratio.__main__ import main
@@ -72,6 +73,22 @@ def test_dem_and_sun_flatten_the_scene(folder, output, capsys):
     assert json.loads(maps.attrs["normalisation"])["to"] == [30, 0, 30]
     # the file itself tells what the closing table told
     assert br.photometry.geometry_summary(maps)[-1] == masked
+
+
+def test_the_report_says_which_geometry(folder):
+    from bandratio.report.wording import provenance
+
+    run(folder, "--geometry", folder / "angles.tif", "--law", "lambert")
+    page = provenance(br.open_maps(folder / "maps.zarr"), None, {})
+    assert (
+        "<dt>geometry</dt><dd>normalised to incidence 30°, emission 0°, phase 30° by the Lambert law" in page
+    )
+    assert "sun too low" in page
+    bare = provenance(xr.Dataset(attrs={"noise": "{}"}), None, {})
+    assert "<dt>geometry</dt><dd>as observed, not normalised</dd>" in bare
+    broken = provenance(xr.Dataset(attrs={"normalisation": "<b>"}), None, {})
+    assert "cannot be read" in broken
+    assert "<b>" not in broken
 
 
 def test_without_geometry_the_slopes_show(folder, capsys):
