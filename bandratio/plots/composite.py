@@ -98,7 +98,7 @@ def _draw(ax: Axes, planes: list[xr.DataArray], limits: Sequence[tuple[float, fl
         told.append((str(plane.name).replace("$", r"\$"), low, high, "" if unit == "1" else f" {unit}"))
     colour[missing] = 1.0
     grid = Grid.of(planes[0])
-    ax.imshow(colour, extent=grid.extent, interpolation="nearest")
+    ax.imshow(colour, extent=grid.covered(planes[0].shape, step), interpolation="nearest")
     finish_map(ax, planes[0], grid)
     _key(ax, told)
 

@@ -143,6 +143,12 @@ class Grid:
     unit: str
     metres: float = 1.0
 
+    def covered(self, shape: tuple[int, ...], step: int) -> tuple[float, float, float, float]:
+        """Extent of a picture of squares of `step` pixels, which may reach beyond the last row and column."""
+        left, right, bottom, top = self.extent
+        rows, columns = (-(-size // step) * step / size for size in shape)
+        return left, left + (right - left) * columns, top + (bottom - top) * rows, top
+
     @classmethod
     def of(cls, values: xr.DataArray) -> Grid:
         """Read the grid off a two-dimensional map."""

@@ -109,19 +109,19 @@ def _draw(ax: Axes, values: xr.DataArray) -> None:
     grid = Grid.of(values)
     picture = picture_of(values, step)
     if "flag_values" in values.attrs:
-        _draw_flags(ax, picture, grid)
+        _draw_flags(ax, picture, grid.covered(values.shape, step))
     else:
-        _draw_values(ax, picture, grid)
+        _draw_values(ax, picture, grid.covered(values.shape, step))
     finish_map(ax, values, grid)
     if step > 1:
         ax.set_title(f"averaged over {step} × {step} pixels", fontsize="x-small")
 
 
-def _draw_values(ax: Axes, picture: xr.DataArray, grid: Grid) -> None:
+def _draw_values(ax: Axes, picture: xr.DataArray, extent: tuple[float, float, float, float]) -> None:
     numbers = np.asarray(picture.values, dtype=float)
     colours, norm, extend = value_scale(numbers, is_sigma="_sigma" in str(picture.name))
     image = ax.imshow(
-        np.ma.masked_invalid(numbers), cmap=colours, norm=norm, extent=grid.extent, interpolation="nearest"
+        np.ma.masked_invalid(numbers), cmap=colours, norm=norm, extent=extent, interpolation="nearest"
     )
     bar = ax.figure.colorbar(image, ax=ax, extend=extend, fraction=0.05, pad=0.02)
     bar.set_label(_wrapped(labelled(picture)))
@@ -167,7 +167,7 @@ def flag_meanings(flags: xr.DataArray) -> dict[int, str]:
     return dict(zip(codes, words, strict=True))
 
 
-def _draw_flags(ax: Axes, picture: xr.DataArray, grid: Grid) -> None:
+def _draw_flags(ax: Axes, picture: xr.DataArray, extent: tuple[float, float, float, float]) -> None:
     from matplotlib.colors import ListedColormap
     from matplotlib.patches import Patch
 
@@ -182,7 +182,7 @@ def _draw_flags(ax: Axes, picture: xr.DataArray, grid: Grid) -> None:
         cmap=ListedColormap(list(colours.values())),
         vmin=-0.5,
         vmax=len(colours) - 0.5,
-        extent=grid.extent,
+        extent=extent,
         interpolation="nearest",
     )
     patches = []

@@ -117,7 +117,7 @@ def candidate_table(
     table : DataFrame
     labels : DataArray of int32
     """
-    flag = _require_flags(flags)
+    flag = _require_flags(flags).compute()
     if min_pixels != int(min_pixels) or min_pixels < 1:
         raise ValueError(f"min_pixels is a number of pixels, 1 or more, got {min_pixels}")
     numbers, kinds = _connected(np.asarray(flag.values), _candidate_codes(flag), int(min_pixels))

@@ -29,10 +29,10 @@ def linked_views(maps: xr.Dataset, data: PageData) -> dict[str, Any]:
 
     images = ColumnDataSource(
         {
-            "x": [min(data.extent[:2])],
-            "y": [min(data.extent[2:])],
-            "dw": [abs(data.extent[1] - data.extent[0])],
-            "dh": [abs(data.extent[3] - data.extent[2])],
+            "x": [min(data.covered[:2])],
+            "y": [min(data.covered[2:])],
+            "dw": [abs(data.covered[1] - data.covered[0])],
+            "dh": [abs(data.covered[3] - data.covered[2])],
             **_image_columns(data),
         }
     )

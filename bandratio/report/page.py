@@ -85,6 +85,7 @@ def write_report(
     _check(maps, flags)
     table, labels = None, None
     if flags is not None:
+        flags = flags.assign(flag=flags["flag"].compute())
         table, labels = candidate_table(flags, cube, noise, min_pixels=min_pixels)
     page = _page(maps, flags, table, labels, title, command)
     with beside(path, overwrite=overwrite) as unfinished:

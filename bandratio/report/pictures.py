@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+import dask
 import numpy as np
 import pandas as pd
 import xarray as xr
@@ -12,7 +13,7 @@ from numpy.typing import NDArray
 
 from ..plots.frame import Grid, parameter_names, require_plane
 from ..plots.maps import flag_meanings
-from ..plots.resampling import picture_of, picture_step
+from ..plots.resampling import picture_of, picture_step, shrunk
 
 __all__ = ["PageData", "page_data"]
 
@@ -44,6 +45,8 @@ class PageData:
         Word of each flag.
     extent : tuple of float
         Left, right, bottom, top, in the units of the axes.
+    covered : tuple of float
+        The same of the pictures, whose last squares may reach beyond the scene.
     axes : tuple of str
         Names of the axes with their units.
     step : int
@@ -63,6 +66,7 @@ class PageData:
     flag: NDArray | None
     words: dict[int, str]
     extent: tuple[float, float, float, float]
+    covered: tuple[float, float, float, float]
     axes: tuple[str, str]
     step: int
     shape: tuple[int, int]
@@ -88,30 +92,38 @@ def page_data(maps: xr.Dataset, flags: xr.Dataset | None, labels: xr.DataArray |
     budget = min(_MOST_PICTURE_PIXELS, int(_PICTURE_BYTES / (len(columns) * 4 * 4 / 3 + 12)))
     step = picture_step(shape, budget)
     grid = Grid.of(first)
+    # a picture's first row is drawn at the lowest coordinate
     flip = tuple(
-        slice(None, None, -1) if falls else slice(None)
-        for falls in (grid.extent[2] > grid.extent[3], grid.extent[0] > grid.extent[1])
+        slice(None, None, -1) if dim in first.coords and _falls(first[dim].values) else slice(None)
+        for dim in dims
     )
-    if grid.unit != "pixel":
-        flip = tuple(
-            slice(None, None, -1) if dim in first.coords and _falls(first[dim].values) else slice(None)
-            for dim in dims
-        )
-    planes = {
-        column: np.ascontiguousarray(
-            picture_of(maps[column].transpose(*dims), step).to_numpy()[flip], dtype=np.float32
-        )
-        for column in columns
-    }
     flag = None if flags is None else flags["flag"].transpose(*dims)
     words = {} if flag is None else flag_meanings(flag)
     whole_flag = None if flag is None else np.asarray(flag.values)
+    row, column, left_out = _chosen_pixels(shape, len(names), whole_flag, words)
+    # one pass for everything that is read from lazy maps
+    small, at_points = dask.compute(  # type: ignore[attr-defined,no-untyped-call]
+        {name: shrunk(maps[name].transpose(*dims), step) for name in columns},
+        {
+            name: maps[name].isel(
+                {dims[0]: xr.DataArray(row, dims="point"), dims[1]: xr.DataArray(column, dims="point")}
+            )
+            for name in columns
+        },
+    )
+    planes = {
+        name: np.ascontiguousarray(plane.values[flip], dtype=np.float32) for name, plane in small.items()
+    }
     picture = None
     if flag is not None:
         picture = np.ascontiguousarray(picture_of(flag.copy(data=whole_flag), step).to_numpy()[flip])
     scale, axes = _axes(grid, dims)
     left, right, bottom, top = (edge * scale for edge in grid.extent)
-    points, left_out = _points(maps, names, whole_flag, words, labels, scale)
+    points = _points(first, names, at_points, row, column, scale)
+    points["flag"] = -1 if whole_flag is None else whole_flag[row, column].astype(int)
+    points["region"] = 0 if labels is None else labels.transpose(*dims).to_numpy()[row, column].astype(int)
+    points = points[np.isfinite(points["v0"].to_numpy())].reset_index(drop=True)
+    pixels = tuple(edge * scale for edge in grid.covered(shape, step))
     counts = {} if whole_flag is None else {
         word: int((whole_flag == code).sum()) for code, word in words.items()
     }  # fmt: skip
@@ -121,6 +133,7 @@ def page_data(maps: xr.Dataset, flags: xr.Dataset | None, labels: xr.DataArray |
         picture,
         words,
         (left, right, bottom, top),
+        pixels,  # type: ignore[arg-type]
         axes,
         step,
         shape,
@@ -145,47 +158,42 @@ def _axes(grid: Grid, dims: tuple[object, ...]) -> tuple[float, tuple[str, str]]
     return 1.0, named.get(grid.unit, (str(dims[1]), str(dims[0])))
 
 
-def _points(
-    maps: xr.Dataset,
-    names: list[str],
-    flag: NDArray | None,
-    words: dict[int, str],
-    labels: xr.DataArray | None,
-    scale: float,
-) -> tuple[pd.DataFrame, int]:
-    """Pixels spread evenly over the scene, and the candidates, all of them where they are few."""
-    first = maps[names[0]]
-    rows, columns = first.shape
-    share = min(1.0, _POINT_BYTES / ((_POINTS + _CANDIDATE_POINTS) * (2 * len(names) + 12) * 4 * 4 / 3))
+def _chosen_pixels(
+    shape: tuple[int, int], parameters: int, flag: NDArray | None, words: dict[int, str]
+) -> tuple[NDArray, NDArray, int]:
+    """Rows and columns of pixels spread evenly and of the candidates, and how many candidates are left out."""
+    rows, columns = shape
+    share = min(1.0, _POINT_BYTES / ((_POINTS + _CANDIDATE_POINTS) * (2 * parameters + 12) * 4 * 4 / 3))
     most = int(share * _CANDIDATE_POINTS)
     step = max(1, math.ceil(math.sqrt(rows * columns / (share * _POINTS))))
     row, column = (axis.ravel() for axis in np.mgrid[step // 2 : rows : step, step // 2 : columns : step])
-    left_out = 0
-    if flag is not None:
-        codes = [code for code, word in words.items() if word.endswith("candidate")]
-        found_row, found_column = np.nonzero(np.isin(flag, codes))
-        if found_row.size > most:
-            chosen = np.linspace(0, found_row.size - 1, most).astype(int)
-            left_out = found_row.size - most
-            found_row, found_column = found_row[chosen], found_column[chosen]
-        flat = np.unique(np.concatenate([row * columns + column, found_row * columns + found_column]))
-        row, column = flat // columns, flat % columns
+    if flag is None:
+        return row, column, 0
+    codes = [code for code, word in words.items() if word.endswith("candidate")]
+    found_row, found_column = np.nonzero(np.isin(flag, codes))
+    left_out = max(found_row.size - most, 0)
+    if left_out:
+        chosen = np.linspace(0, found_row.size - 1, most).astype(int)
+        found_row, found_column = found_row[chosen], found_column[chosen]
+    flat = np.unique(np.concatenate([row * columns + column, found_row * columns + found_column]))
+    return flat // columns, flat % columns, left_out
+
+
+def _points(
+    first: xr.DataArray,
+    names: list[str],
+    at_points: dict[str, xr.DataArray],
+    row: NDArray,
+    column: NDArray,
+    scale: float,
+) -> pd.DataFrame:
     y, x = first.dims
     table = {
         "x": (first[x].to_numpy()[column] if x in first.coords else column).astype(float) * scale,
         "y": (first[y].to_numpy()[row] if y in first.coords else row).astype(float) * scale,
     }
-    at = {y: xr.DataArray(row, dims="point"), x: xr.DataArray(column, dims="point")}
     for place, name in enumerate(names):
         for letter, variable in (("v", name), ("s", f"{name}_sigma")):
-            if variable in maps:
-                table[f"{letter}{place}"] = np.asarray(maps[variable].isel(at).values, dtype=np.float32)
-    table["flag"] = np.full(row.size, -1) if flag is None else flag[row, column].astype(int)
-    table["region"] = (
-        np.zeros(row.size, dtype=int)
-        if labels is None
-        else np.asarray(labels.values)[row, column].astype(int)
-    )
-    frame = pd.DataFrame(table)
-    whole = np.isfinite(frame["v0"].to_numpy())
-    return frame[whole].reset_index(drop=True), left_out
+            if variable in at_points:
+                table[f"{letter}{place}"] = np.asarray(at_points[variable].values, dtype=np.float32)
+    return pd.DataFrame(table)

@@ -131,6 +131,20 @@ def test_large_lazy_maps_are_averaged_and_say_so():
     assert drawn(ax)[0, 0] == pytest.approx(expected)
 
 
+def test_squares_that_reach_beyond_the_map_stay_in_place():
+    """2101 columns in squares of 2: the last square is half outside, and the others must not be squeezed."""
+    values = np.zeros((2001, 2101), dtype=np.float32)
+    values[:, 2098:2100] = 1.0
+    ax = br.plot_map(xr.Dataset({"p": (("y", "x"), values)}), "p")
+    left, right, bottom, top = ax.images[0].get_extent()
+    width = (right - left) / drawn(ax).shape[1]
+    column = int(np.flatnonzero(drawn(ax)[0] == 1)[0])
+    assert (left + column * width, left + (column + 1) * width) == pytest.approx((2097.5, 2099.5))
+    assert (top - bottom) / drawn(ax).shape[0] == pytest.approx(-2)
+    assert ax.get_xlim() == (-0.5, 2100.5)
+    assert ax.get_ylim() == (2000.5, -0.5)
+
+
 def test_a_lone_candidate_survives_averaging():
     codes = np.ones((2100, 2300), dtype=np.int8)
     codes[777, 1000] = 3

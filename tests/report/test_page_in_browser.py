@@ -1,5 +1,7 @@
 """The page in a real browser: no complaint, no network, pointing, selecting, layers, keyboard, hostile names."""
 
+import re
+
 import numpy as np
 import pytest
 import xarray as xr
@@ -98,6 +100,28 @@ def test_pointing_at_a_pixel_gives_its_values(page, made):
         assert shown.rstrip("0") in text
         assert f"{float(f'{sigma:.4g}')}".rstrip("0") in text
     assert "bright candidate" in text
+
+
+def test_pointing_at_a_map_without_coordinates(browser, tmp_path):
+    """Rows count from the top; the pictures are of 3 × 3 pixels, and the last squares reach beyond the scene."""
+    row, column = np.mgrid[:1001, :1301]
+    maps = xr.Dataset({"row": (("y", "x"), row.astype("f4")), "column": (("y", "x"), column.astype("f4"))})
+    browser.open(br.write_report(maps, tmp_path / "plain.html"))
+    for x, y in ((1000, 900), (30, 24)):
+        at = place(browser, "map-left", x, y)
+        mouse(browser, ("mouseMoved", (at[0] - 3, at[1]), False), ("mouseMoved", at, False))
+        shown = {}
+
+        def near(x=x, y=y, shown=shown):
+            text = "".join(browser.deep_text(".bk-Tooltip")).rpartition("}")[2]
+            found = re.findall(r"(?:^|\s)(row|column): ([\d.]+)(?= ±|\s|$)", text)
+            shown.update(dict(found[-2:]))
+            # the window's pixel covers a few of the scene's
+            return (
+                len(shown) == 2 and abs(float(shown["column"]) - x) < 6 and abs(float(shown["row"]) - y) < 6
+            )
+
+        browser.wait(near, 10)
 
 
 @pytest.mark.parametrize(
