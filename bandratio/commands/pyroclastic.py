@@ -60,6 +60,8 @@ def command(
         require_free(regions, overwrite=overwrite)
         if Path(regions).suffix.lower() not in (".csv", ".parquet", ".gpkg"):
             raise ValueError(f"--regions wants a .csv, .parquet or .gpkg, got {regions!r}")
+        if Path(regions).suffix.lower() == ".gpkg":
+            _require_polygons()
     with scheduled(None, None), progress_bar("flagging") as progress:
         limits = {
             name: limit_from(opened, name, given[name])
@@ -79,6 +81,16 @@ def command(
                     table = candidate_regions(flags, min_pixels=min_pixels)
                 click.echo(f"regions in {write_regions(table, regions, overwrite=overwrite)}")
     click.echo(f"written to {written}")
+
+
+def _require_polygons() -> None:
+    """Refuse before anything is flagged where the library for polygons is not there."""
+    from ..regions.membership import require_geopandas
+
+    try:
+        require_geopandas("a .gpkg of regions")
+    except ModuleNotFoundError as error:
+        raise ValueError(f"{error}; or take .csv or .parquet") from None
 
 
 def limit_from(maps: xr.Dataset, name: str, text: str | None) -> float | Threshold | None:

@@ -92,7 +92,7 @@ def candidate_regions(
 
     import rioxarray  # noqa: F401 (it adds .rio)  # isort: skip
 
-    crs = flags["flag"].rio.crs
+    crs = labels.rio.crs
     shapes = outlines(labels, len(table))
     found = geopandas.GeoDataFrame(table, geometry=shapes, crs=None if crs is None else crs.to_wkt())
     found.attrs.update(table.attrs)

@@ -1,6 +1,7 @@
 """The words pyroclastic and report as a user meets them: files in, files and a page out, one line for bad input."""
 
 import re
+import sys
 
 import numpy as np
 import pandas as pd
@@ -105,6 +106,15 @@ def test_bad_input_is_one_line_and_exit_code_2(files, capsys, words, said):
     assert code == 2
     assert len(err.strip().splitlines()) == 1
     assert said in err
+
+
+def test_polygons_without_their_library(files, capsys, monkeypatch):
+    monkeypatch.setitem(sys.modules, "geopandas", None)
+    code, _, err = run(capsys, *FLAG, "--regions", "regions.gpkg")
+    assert code == 2
+    assert "pip install 'bandratio[regions]'; or take .csv or .parquet" in err
+    assert not (files / "flags.tif").exists()
+    assert run(capsys, *FLAG, "--regions", "regions.parquet")[0] == 0
 
 
 def test_existing_files_stay(files, capsys):
