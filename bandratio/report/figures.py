@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from html import escape
 from typing import Any
 
 import numpy as np
@@ -81,9 +82,10 @@ def _flag_colours(data: PageData) -> NDArray[np.uint32]:
 
 
 def _tooltips(
-    data: PageData, hovers: dict[str, Any], axes: tuple[str, str]
-) -> tuple[list[Any], dict[str, Any]]:
-    lines: list[Any] = [(axes[0], "$x{0.00}"), (axes[1], "$y{0.00}")]
+    data: PageData, hovers: dict[str, Any], place_of: tuple[str, str]
+) -> tuple[str, dict[str, Any]]:
+    """What pointing at a pixel shows, and how its numbers are written; `place_of` are the fields of x and y."""
+    lines = [(axis, f"{field}{{0.00}}") for axis, field in zip(data.axes, place_of, strict=True)]
     formatters = {}
     for place, name in enumerate(data.names):
         text = f"@v{place}{{custom}}"
@@ -95,7 +97,13 @@ def _tooltips(
     if data.flag is not None:
         lines.append(("flag", "@flag{custom}"))
         formatters["@flag"] = hovers["word"]
-    return lines, formatters
+    rows = "".join(f"<div><span>{_literal(label)}: </span><b>{text}</b></div>" for label, text in lines)
+    return f'<div style="color: #1a1a1a; font-size: 13px">{rows}</div>', formatters
+
+
+def _literal(name: str) -> str:
+    """A name as the text of a tooltip: no tag in it, and no sign that asks for a value."""
+    return escape(name).replace("@", "&#64;").replace("$", "&#36;")
 
 
 def _figure(title: str, axes: tuple[str, str], width: int, height: int, **options: Any) -> Any:
@@ -183,11 +191,11 @@ def _map(
         plot.image_rgba("colours", x="x", y="y", dw="dw", dh="dh", source=images, name=f"flags-{side}")
     chosen = plot.scatter(
         "x", "y", source=points, marker="square", size=5, fill_alpha=0, line_alpha=0, name=f"points-{side}",
-        selection_fill_alpha=0.9, selection_fill_color=_SELECTED, selection_line_color="white",
+        selection_fill_alpha=0.9, selection_fill_color=_SELECTED, selection_line_color=_SELECTED,
         selection_line_alpha=0.9, nonselection_fill_alpha=0, nonselection_line_alpha=0,
     )  # fmt: skip
     chosen.level = "overlay"
-    tips, formatters = _tooltips(data, hovers, data.axes)
+    tips, formatters = _tooltips(data, hovers, ("$x", "$y"))
     plot.add_tools(HoverTool(renderers=drawn, tooltips=tips, formatters=formatters))
     return plot
 
@@ -200,11 +208,10 @@ def _scatter(data: PageData, points: Any, hovers: dict[str, Any]) -> Any:
     plot.name = "scatter"
     drawn = plot.scatter(
         f"v{first}", f"v{second}", source=points, size=4, fill_color="colour", line_color=None, fill_alpha=0.5,
-        selection_fill_color=_SELECTED, selection_fill_alpha=1, selection_line_color="white",
+        selection_fill_color=_SELECTED, selection_fill_alpha=1, selection_line_color=_SELECTED,
         nonselection_fill_alpha=0.15, name="points-scatter",
     )  # fmt: skip
-    tips, formatters = _tooltips(data, hovers, data.axes)
-    tips[:2] = [(axis, f"@{letter}{{0.00}}") for axis, letter in zip(data.axes, "xy", strict=True)]
+    tips, formatters = _tooltips(data, hovers, ("@x", "@y"))
     plot.add_tools(HoverTool(renderers=[drawn], tooltips=tips, formatters=formatters))
     plot.grid.visible = True
     return plot
