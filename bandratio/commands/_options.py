@@ -36,6 +36,9 @@ def numbers(text: str | None, what: str) -> list[float] | None:
 def band_options(command: Callable[..., Any]) -> Callable[..., Any]:
     """Put on what a scene's file may leave out: wavelengths, widths, quantity, scale and nodata."""
     for option in (
+        click.option(
+            "--variable", help="Variable of a Zarr store or netCDF file, where several could be meant."
+        ),
         click.option("--nodata", type=float, help="Value that means missing, where the file does not say."),
         click.option("--scale", type=float, help="Factor from stored numbers to reflectance."),
         click.option("--quantity", help="Reflectance quantity, e.g. reflectance_factor or radiance_factor."),
@@ -57,6 +60,7 @@ def cube_from(scene: str, given: Mapping[str, Any]) -> xr.DataArray:
         quantity=given["quantity"],
         scale=given["scale"],
         nodata=given["nodata"],
+        variable=given.get("variable"),
     )
     return cube
 
