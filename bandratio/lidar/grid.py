@@ -106,13 +106,14 @@ def grid_returns(albedos: xr.Dataset, like: xr.DataArray | xr.Dataset, *, pool: 
     cells = _means(dict(zip(_SUMS, sums, strict=True)), "incidence_deg" in albedos)
     grid = xr.Dataset(
         {name: (("y", "x"), values.reshape(len(rows), len(columns))) for name, values in cells.items()},
-        coords={"y": like["y"], "x": like["x"], "quantity": "zero_phase_albedo"},
+        # bare axes: what else the cube's coordinates say (quantity, angles) does not hold for the lidar
+        coords={"y": like["y"].variable, "x": like["x"].variable, "quantity": "zero_phase_albedo"},
         attrs={**albedos.attrs, "pool": int(pool), "n_outside": outside, "n_left_out": left_out},
     )
     shared = grid["red_sigma_shared"] * grid["infrared_sigma_shared"]
     grid["covariance_shared"] = shared * albedos.attrs.get("gain_correlation", 0.0)
     if "spatial_ref" in like.coords:
-        grid = grid.assign_coords(spatial_ref=like["spatial_ref"])
+        grid = grid.assign_coords(spatial_ref=like["spatial_ref"].variable)
     return _described(grid, albedos)
 
 

@@ -187,6 +187,16 @@ def test_pooled_map_finds_more_and_keeps_its_false_discovery_rate():
 SHOTS = _albedos([0.1, 0.2], [0.1, 0.2], [0, 10], [0, 0])
 
 
+def test_the_grid_takes_only_the_axes_and_projection_of_a_cube():
+    # a cube at one geometry holds its quantity and angles as scalar coordinates, which do not hold for a lidar
+    like = _like().assign_coords(quantity="radiance_factor", incidence=30.0, phase=30.0)
+    grid = br.grid_returns(SHOTS, like)
+    assert set(grid.coords) == {"y", "x", "quantity", "spatial_ref"}
+    assert grid["quantity"].item() == "zero_phase_albedo"
+    assert grid.rio.crs == like.rio.crs
+    assert br.ice_flags(**br.flag_arguments(grid))["flag"].shape == (4, 5)
+
+
 @pytest.mark.parametrize(
     ("albedos", "like", "options", "error", "message"),
     [
