@@ -186,11 +186,15 @@ _TYPICAL = ("sigma_red", "sigma_infrared", "relative_red", "relative_infrared", 
 
 
 def _medians(arrays: Mapping[str, Any]) -> Floats:
-    """Median of the errors and of the incidence, of at most some thousand points spread over the block."""
+    """Median of the errors and of the incidence, of at most some thousand judged points spread over the block."""
+    # where there is no albedo the errors are those of nothing, as in the empty cells of a grid
+    seen = ~np.isnan(arrays["infrared"]) | ~np.isnan(arrays["infrared_limit"])
+    judged = np.flatnonzero(np.broadcast_to(~np.isnan(arrays["red"]) & seen, np.shape(arrays["red"])))
+    judged = judged[:: max(1, judged.size // 10_000)]
     medians = []
     for name in _TYPICAL:
         values = np.ravel(arrays[name])
-        values = values[:: max(1, values.size // 10_000)]
+        values = values if values.size == 1 else values[judged]
         known = values[~np.isnan(values)]
         medians.append(np.median(known) if known.size else np.nan)
     return np.array(medians)

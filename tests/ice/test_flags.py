@@ -168,6 +168,19 @@ def test_two_bands_of_a_cube_keep_their_coordinates_and_give_their_wavelengths()
     assert "never proof" in flags.attrs["caution"]
 
 
+@pytest.mark.parametrize("lazy", [False, True])
+def test_what_can_be_seen_is_told_by_the_points_that_are_judged(lazy):
+    # most cells of a grid of returns are empty, and hold errors of 0
+    red, infrared = np.full((2, 30, 30), np.nan)
+    red[:5], infrared[:5] = SOIL
+    errors = np.where(np.isnan(red), 0.0, 0.01)
+    arrays = (red, infrared, errors, errors)
+    grid = br.ice_flags(*(da.from_array(a, chunks=15) if lazy else a for a in arrays), ice_free=LIST)
+    alone = br.ice_flags(*SOIL, 0.01, 0.01, ice_free=LIST)
+    assert grid.attrs["typical_sigma_red"] == grid.attrs["typical_sigma_infrared"] == 0.01
+    assert grid.attrs["least_areal_ice"] == alone.attrs["least_areal_ice"] > 0
+
+
 def test_flags_survive_a_file(tmp_path):
     flags = br.ice_flags(*scene(500).T, 0.001, 0.001, **NOISE)
     br.write_maps(flags, tmp_path / "flags.nc")
