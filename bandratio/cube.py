@@ -122,7 +122,8 @@ def _labelled(array: Any) -> xr.DataArray:
             f"an array of shape {tuple(data.shape)} is no cube; wanted (band,), (band, sample) or (band, y, x), or a "
             "DataArray with named dimensions"
         )
-    return xr.DataArray(data, dims=names[data.ndim])
+    # named here, since a dask array would give the cube the name of its task
+    return xr.DataArray(data, dims=names[data.ndim], name="reflectance")
 
 
 def _band_widths(values: ArrayLike, bands: int) -> np.ndarray:

@@ -22,6 +22,10 @@ def test_dimensions_by_shape(shape, dims):
     assert br.as_cube(np.zeros(shape), [600, 700]).dims == dims
 
 
+def test_a_cube_of_a_dask_array_is_not_called_by_its_task():
+    assert br.as_cube(da.zeros((2, 3)), [600, 700]).name == "reflectance"
+
+
 def test_a_labelled_array_keeps_its_coordinates_and_projection():
     array = xr.DataArray(
         RNG.random((3, 4, 2)),
