@@ -5,7 +5,7 @@ from __future__ import annotations
 import difflib
 from collections.abc import Iterable
 
-__all__ = ["listed", "non_negative", "one_of", "open_fraction", "positive", "suggestion"]
+__all__ = ["listed", "non_negative", "one_of", "open_fraction", "positive", "require_noise", "suggestion"]
 
 
 #: More values than this are not spelled out in a message.
@@ -66,3 +66,11 @@ def open_fraction(name: str, value: object) -> float:
     if not 0 < number < 1:
         raise ValueError(f"{name} must lie between 0 and 1, both excluded, got {number:g}")
     return number
+
+
+def require_noise(noise: object) -> None:
+    """Raise where `noise` is neither a `Noise` nor None."""
+    # told by what a Noise does, since this room lies below that of Noise
+    if noise is not None and not hasattr(noise, "for_cube"):
+        hint = f"; br.Noise(random={noise:g})?" if isinstance(noise, int | float) else ""
+        raise TypeError(f"noise must be a br.Noise or None, got {type(noise).__name__}{hint}")

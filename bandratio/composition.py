@@ -14,7 +14,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from ._checks import non_negative, one_of
+from ._checks import non_negative, one_of, require_noise
 from .bands import TOLERANCE_NM, nearest_bands
 from .cube import quantity_of, require_cube
 from .noise import Noise
@@ -274,6 +274,7 @@ def _composed(
     tolerance: float,
 ) -> xr.Dataset:
     cube = require_cube(cube)
+    require_noise(noise)
     quantity = quantity_of(cube)
     if quantity not in (None, "reflectance_factor"):
         raise ValueError(

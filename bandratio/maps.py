@@ -9,7 +9,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from ._checks import listed
+from ._checks import listed, require_noise
 from .bands import TOLERANCE_NM
 from .catalogue import resolve
 from .cube import is_lazy, require_cube
@@ -81,14 +81,13 @@ def parameters(
     11.17 ± 0.88 % per 100 nm
     """
     cube = require_cube(cube)
+    require_noise(noise)
     made = None if geometry is None else _plan(cube, geometry)
     if made is not None and (made.lazy or not made.linear or not _known_per_band(cube, noise)):
         from .photometry import normalise
 
         # lazy blocks are normalised and mapped one after the other anyway; the rest does not fit the single pass
         cube, made = normalise(cube, **_arguments(geometry)), None
-    if noise is not None and not isinstance(noise, Noise):
-        raise TypeError(f"noise must be a br.Noise, got {type(noise).__name__}; br.Noise(random={noise!r})?")
     if parts and noise is None:
         raise ValueError("parts=True splits the sigmas, for which noise=… is needed")
     centres = np.asarray(cube["wavelength"].values, dtype=float)

@@ -8,6 +8,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import ArrayLike
 
+from ._checks import require_noise
 from .bands import TOLERANCE_NM
 from .maps import parameters
 from .noise import Noise
@@ -68,6 +69,7 @@ def material_table(
     >>> print(f"{float(soil.red_slope):.1f} ± {float(soil.red_slope_sigma):.1f} {table.red_slope.units}")
     11.2 ± 1.4 % per 100 nm
     """
+    require_noise(noise)
     if wavelengths is None and responses is None:
         raise ValueError("give the band centres in nm, or responses=…")
     if spectra is None:

@@ -14,7 +14,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import ArrayLike
 
-from ._checks import listed
+from ._checks import listed, require_noise
 from .bands import TOLERANCE_NM, nearest_bands
 
 if TYPE_CHECKING:
@@ -294,6 +294,7 @@ class BandRatio:
         -------
         random, shared : DataArray of float64, dimensions of `cube` without `wavelength`
         """
+        require_noise(noise)
         g = self.gradient(cube, tolerance=tolerance)
         R = cube.astype(float)
         used = np.any(self.weights_for(cube["wavelength"].values, tolerance), axis=0)

@@ -158,7 +158,7 @@ def test_a_parameter_added_in_ten_lines():
         (["red_slope"], {"tolerance": 0.0}, None),
         (["red_slope"], {"tolerance": -1}, "tolerance must be zero or above"),
         (None, {"parts": True}, "parts=True splits the sigmas, for which noise=… is needed"),
-        (None, {"noise": 0.01}, "noise must be a br.Noise, got float"),
+        (None, {"noise": 0.01}, "noise must be a br.Noise or None, got float; br.Noise"),
     ],
 )
 def test_bad_requests(names, options, message):

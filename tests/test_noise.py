@@ -233,3 +233,27 @@ def test_a_table_that_is_no_text(tmp_path):
     table.write_bytes("wavelength,random\n480,0.1 # \xb5m\n".encode("latin-1"))
     with pytest.raises(ValueError, match=r"noise.csv is no text in UTF-8"):
         br.Noise.from_csv(table)
+
+
+@pytest.mark.parametrize(
+    "call",
+    [
+        lambda noise: br.parameters(CUBE, noise, geometry={"incidence": 30, "emission": 0, "phase": 30}),
+        lambda noise: br.iron_oxide(CUBE, noise),
+        lambda noise: br.titanium_oxide(CUBE, noise),
+        lambda noise: br.optical_maturity(CUBE, noise),
+        lambda noise: br.material_table([600, 700], noise=noise),
+        lambda noise: br.BandRatio({600: 1}, {480: 1}).sigma(CUBE, noise),
+        lambda noise: br.thresholds(
+            br.reference_spectra([600, 700]), "red_slope", "olivine", "basalt", noise=noise
+        ),
+    ],
+)
+def test_a_number_is_no_noise(call):
+    with pytest.raises(
+        TypeError, match=r"noise must be a br.Noise or None, got float; br.Noise\(random=0.01\)"
+    ):
+        call(0.01)
+    # a second position taken for another argument, as in iron_oxide(cube, "wilcox2005")
+    with pytest.raises(TypeError, match=r"noise must be a br.Noise or None, got str$"):
+        call("wilcox2005")

@@ -9,7 +9,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from .._checks import listed, open_fraction
+from .._checks import listed, open_fraction, require_noise
 from ..bands import TOLERANCE_NM
 from ..catalogue import resolve, shoulder_of
 from ..cube import require_cube
@@ -101,6 +101,7 @@ def thresholds(
     """
     rate = open_fraction("false_alarm_rate", false_alarm_rate)
     cube = require_cube(spectra)
+    require_noise(noise)
     ratios, _ = resolve(_as_list(names), cube["wavelength"].values, tolerance=tolerance)
     if len(ratios) > 2:
         raise ValueError(
