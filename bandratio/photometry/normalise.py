@@ -93,8 +93,8 @@ def normalise(
     shot²·R: for reflectances below 0.15 the former holds to 9 % and the latter's sigma to 5 %, checked up to incidence 72°.
 
     Where the law has another parameter in each band, a slope error does not cancel wholly in ratios; the part common to
-    the bands (their mean) is what `pixel_gain` holds. Between k = 0.60 and 0.65, what is left of a slope error of 1° at 45° incidence
-    is 0.1 % of the ratio.
+    the bands (their mean) is what `pixel_gain` holds. Between k = 0.60 and 0.65, what is left of a slope error of 1° at
+    45° incidence is 0.1 % of the ratio.
 
     References
     ----------
