@@ -2,7 +2,7 @@
 
 Every run is a process of its own, parted from one that has everything imported, so that the moments, which are drawn
 over the whole life of an undisturbed run, fall into the work: the laying out, the blocks, the
-finishing, the moving. Half of the runs write Zarr, half a GeoTIFF.
+finishing, the moving. Half of the kills wait for a number of finished blocks instead. Half of the runs write Zarr, half a GeoTIFF.
 """
 
 from __future__ import annotations
@@ -64,6 +64,13 @@ def mapped(scene: Path, output: Path, *more: str) -> Callable[[], object]:
     return lambda: bandratio_main(arguments)
 
 
+def finished_blocks(folder: Path) -> int:
+    try:
+        return sum(marker.suffix == ".npy" for marker in folder.iterdir())
+    except FileNotFoundError:
+        return 0
+
+
 def same(one: Path, other: Path) -> bool:
     def compare() -> bool:
         first, second = br.open_maps(one), br.open_maps(other)
@@ -99,15 +106,19 @@ def main() -> None:
             output = work / f"maps{ending}"
             unfinished = output.with_name(f".{output.name}.unfinished")
             process = start(mapped(scene, output))
-            time.sleep(draw.uniform(0.02, 1) * lives[ending])
+            done = unfinished / "done"
+            # every other pair is killed some time after a number of blocks, so that enough kills fall among them
+            wanted, began = draw.randint(1, 12) if k // 2 % 2 else 0, time.perf_counter()
+            while finished_blocks(done) < wanted and time.perf_counter() - began < 2 * lives[ending]:
+                time.sleep(0.002)
+            time.sleep(draw.uniform(0, 0.1) if wanted else draw.uniform(0.02, 1) * lives[ending])
             os.kill(process, signal.SIGKILL)
             if ended_well(process):
                 # it was quicker than the undisturbed run: no kill, so it does not count
-                lives[ending] *= 0.8
+                lives[ending] *= 1 if wanted else 0.9
                 remove(output)
                 continue
-            done = unfinished / "done"
-            blocks = len(list(done.glob("*.npy"))) if done.is_dir() else 0
+            blocks = finished_blocks(done)
             moment = (
                 "while it tidied up" if output.exists()
                 else "before its first block" if not blocks

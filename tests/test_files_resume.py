@@ -430,7 +430,7 @@ def test_memory_does_not_grow_with_the_scene(tmp_path, ending):
             "interleave = bip\nbyte order = 0\nwavelength = {480, 600, 700, 830}\n"
         )
     else:
-        path = write_scene(tmp_path / "scene.tif", 2048, 2048)
+        path = write_scene(tmp_path / "scene.tif")
     code = (
         "import resource, sys\n"
         "from bandratio.__main__ import main\n"
