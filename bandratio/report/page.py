@@ -17,7 +17,7 @@ import xarray as xr
 
 from ..files.atomic import beside, require_free
 from ..noise import Noise
-from ..plots.frame import parameter_names
+from ..plots.frame import Grid, parameter_names
 from ..plots.maps import FLAG_COLOURS
 from ..regions import candidate_table
 from . import wording
@@ -161,7 +161,7 @@ def _page(
             f'<div id="view-{name}" role="group" aria-label="{text}">{places[name]}</div>'
             for name, text in described.items()
         ),
-        regions=wording.region_section(table),
+        regions=wording.region_section(table, _coordinate_unit(maps)),
         parameters=wording.parameter_table(maps, data),
         provenance=wording.provenance(maps, flags, versions),
         command=again,
@@ -169,6 +169,17 @@ def _page(
         names=json.dumps(data.names).replace("<", "\\u003c").replace("&", "\\u0026"),
         scripts=script,
     )
+
+
+def _coordinate_unit(maps: xr.Dataset) -> str:
+    """Units of the regions' x and y: those of the maps' coordinates, not of the views' axes."""
+    first = next(maps[name] for name in parameter_names(maps) if maps[name].ndim == 2)
+    grid = Grid.of(first)
+    if grid.unit == "m":
+        unit = "m" if grid.metres == 1 else "km" if grid.metres == 1000 else "map unit"
+    else:
+        unit = {"degree": "°", "pixel": "pixel"}.get(grid.unit, "map unit")
+    return unit
 
 
 def _options(names: list[str], chosen: int) -> str:

@@ -12,6 +12,7 @@ import pandas as pd
 import xarray as xr
 
 from ..photometry import geometry_summary
+from .noise_words import noise_words, readable_attribute
 from .pictures import PageData
 
 __all__ = [
@@ -24,7 +25,7 @@ _MOST_ROWS, _MOST_CELLS = 500, 20_000
 
 _READABLE = {
     "region": "region", "kind": "kind", "n_pixels": "pixels", "area_map": "area [map unit²]",
-    "area_km2": "true area [km²]", "x": "x", "y": "y", "longitude": "longitude [°]", "latitude": "latitude [°]",
+    "area_km2": "true area [km²]", "longitude": "longitude [°]", "latitude": "latitude [°]",
     "expected_false_pixels": "expected false pixels",
 }  # fmt: skip
 
@@ -64,7 +65,7 @@ def answer_lines(data: PageData, flags: xr.Dataset | None, table: pd.DataFrame |
     if rate is not None:
         held = (
             f"On average at most {100 * float(rate):.3g} % of the candidates are false, if the noise is what was stated "
-            f"({escape(_short(flags.attrs.get('noise', 'not said')))}); {data.counts.get('undecided', 0):,} pixels are undecided."
+            f"({escape(_short(noise_words(flags.attrs.get('noise', 'not said'))))}); {data.counts.get('undecided', 0):,} pixels are undecided."
         )
     return [f"<strong>Where does this scene look like {subject}?</strong>", answer, held]
 
@@ -148,8 +149,11 @@ def table_html(
             if isinstance(value, tuple):
                 line.append(f"<td>{value[0]}</td>")
             elif isinstance(value, (float, np.floating)):
-                shown = f"{value:,.5g}" if np.isfinite(value) else "–"
-                line.append(f'<td data-value="{value if np.isfinite(value) else ""}">{shown}</td>')
+                known = bool(np.isfinite(value))
+                shown = str(value) if isinstance(value, _Place) else f"{value:,.5g}"
+                line.append(
+                    f'<td data-value="{float(value) if known else ""}">{shown if known else "–"}</td>'
+                )
             elif isinstance(value, (int, np.integer)):
                 line.append(f'<td data-value="{value}">{value:,}</td>')
             else:
@@ -158,8 +162,11 @@ def table_html(
     return f"<table><thead><tr>{''.join(cells)}</tr></thead><tbody>{''.join(body)}</tbody></table>"
 
 
-def region_section(table: pd.DataFrame | None) -> str:
-    """The table of regions, with a button in each row that selects its pixels in the views."""
+def region_section(table: pd.DataFrame | None, unit: str = "") -> str:
+    """The table of regions, with a button in each row that selects its pixels in the views.
+
+    `unit` is that of the coordinates x and y.
+    """
     if table is None:
         return ""
     heading = '<section aria-labelledby="regions-title"><h2 id="regions-title">Candidate regions</h2>'
@@ -167,21 +174,47 @@ def region_section(table: pd.DataFrame | None) -> str:
         return f"{heading}<p>There are none.</p></section>"
     shown = table.head(min(_MOST_ROWS, _MOST_CELLS // table.shape[1]))
     note = f"<p>The {len(shown):,} largest of {len(table):,}.</p>" if len(table) > len(shown) else ""
-    header = ["", *(_heading(str(name)) for name in shown.columns)]
+    if "area_km2" in shown.columns:
+        shown = shown.drop(columns="area_map", errors="ignore")
+    placed = {axis: f"{axis} [{unit}]" if unit else axis for axis in "xy"}
+    header = ["", *(placed.get(str(name)) or _heading(str(name)) for name in shown.columns)]
     rows = []
     for _, row in shown.iterrows():
         number = int(row["region"])
         button = f'<button type="button" data-region="{number}" aria-label="select region {number}">select</button>'
-        rows.append([(button,), *(row[name] for name in shown.columns)])
+        rows.append([(button,), *(_cell(str(name), row[name]) for name in shown.columns)])
     body = table_html(header, rows, text_columns=[1 + list(shown.columns).index("kind")], sortable=True)
-    note += (
-        "<p>Expected false pixels: the promised rate, spread evenly; lone pixels are false more often than that, large "
-        "regions less.</p>"
-    )
+    if "expected_false_pixels" in shown.columns:
+        note += (
+            "<p><strong>Expected false pixels</strong>: how many of a region's pixels are no candidates after all, if the "
+            "promised false discovery rate is spread evenly over all candidates (rate × pixels). Lone pixels are false "
+            "more often than that, large regions less.</p>"
+        )
     return (
         f'{heading}{note}<div class="scroll" tabindex="0" role="region" aria-label="Table of candidate regions">{body}</div>'
         "</section>"
     )
+
+
+#: Decimals of a region's place; the fourth of a degree is 3 m on the Moon.
+_DECIMALS = {"x": 3, "y": 3, "longitude": 4, "latitude": 4}
+
+
+def _cell(column: str, value: Any) -> Any:
+    return _Place(value).to(_DECIMALS[column]) if column in _DECIMALS else value
+
+
+class _Place(float):
+    """A coordinate, which a table shows to fixed decimals."""
+
+    decimals = 3
+
+    def to(self, decimals: int) -> _Place:
+        self.decimals = decimals
+        return self
+
+    def __str__(self) -> str:
+        return f"{float(self):,.{self.decimals}f}"
 
 
 def _heading(column: str) -> str:
@@ -216,7 +249,7 @@ def parameter_table(maps: xr.Dataset, data: PageData) -> str:
 
 def provenance(maps: xr.Dataset, flags: xr.Dataset | None, versions: dict[str, str]) -> str:
     """Noise, thresholds, attributes of the files, and versions, as a list of terms."""
-    told: list[tuple[str, str]] = [("noise", str(maps.attrs.get("noise", "not said in the maps")))]
+    told: list[tuple[str, str]] = [("noise", noise_words(maps.attrs.get("noise", "not said in the maps")))]
     done = {"noise", "thresholds"}
     try:
         told.append(("geometry", "; ".join(geometry_summary(maps)).removeprefix("geometry: ")))
@@ -238,7 +271,7 @@ def provenance(maps: xr.Dataset, flags: xr.Dataset | None, versions: dict[str, s
     for title, dataset in (("maps", maps), ("flags", flags)):
         if dataset is not None:
             told += [
-                (f"{title}: {key}", _short(value, 2000))
+                (f"{title}: {key}", _short(readable_attribute(str(key), value), 2000))
                 for key, value in dataset.attrs.items()
                 if key not in done and str(value)
             ]

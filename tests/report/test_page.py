@@ -42,7 +42,8 @@ def test_question_answer_and_provenance(tmp_path):
     assert "bandratio report 'my maps.tif' -o page.html" in text.replace("&#x27;", "'")
     assert "threshold brighter_than 0.2, absolute; whole sigma" in text
     assert f"bandratio {br.__version__}" in text
-    assert "{&quot;random&quot;: 0.001}" in text
+    assert "if the noise is what was stated (random 0.001)" in text
+    assert "noise random 0.001 geometry" in text
     # of the page's own tags none refers to another file; the browser's test sees that nothing is asked for
     tags = re.findall(
         r"<[^>]*>", re.sub(r"(<script\b[^>]*>).*?</script>", r"\1", page.read_text(), flags=re.DOTALL)
