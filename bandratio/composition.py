@@ -320,7 +320,15 @@ def _composed(
         [(reason == code).sum() for code in range(len(_REASONS))], dim="reason"
     ).assign_coords(reason=list(_REASONS))
     maps = xr.Dataset({key: each.drop_vars("fwhm", errors="ignore") for key, each in result.items()})
-    maps.attrs = {"Conventions": "CF-1.11", "noise": noise.describe() if noise is not None else "none given"}
+    from . import __version__
+
+    centres = np.asarray(cube["wavelength"].values, dtype=float)
+    maps.attrs = {
+        "Conventions": "CF-1.11",
+        "bandratio_version": __version__,
+        "wavelengths": ", ".join(f"{centre:g}" for centre in centres) + " nm",
+        "noise": noise.describe() if noise is not None else "none given",
+    }
     return maps
 
 

@@ -140,8 +140,13 @@ class BandRatio:
         for field in ("name", "units", "long_name", "source"):
             if not isinstance(getattr(self, field), str):
                 raise TypeError(f"{field} must be text, got {getattr(self, field)!r}")
-        if "/" in self.name or self.name != self.name.strip():
-            raise ValueError(f"name must hold no slash and no surrounding space, got {self.name!r}")
+        if "/" in self.name or len(self.name.split()) > 1 or self.name != self.name.strip():
+            raise ValueError(f"name must hold no slash and no space, got {self.name!r}; use _ between words")
+        wavelengths = [*numerator, *denominator]
+        if max(wavelengths) < 30:
+            raise ValueError(
+                f"the wavelengths must be in nm, got {listed(wavelengths)}, which look like µm; multiply by 1000"
+            )
         object.__setattr__(self, "numerator", numerator)
         object.__setattr__(self, "denominator", denominator)
         for field, number in numbers.items():

@@ -207,6 +207,8 @@ BAD = [
     (({950: 1}, {750: 1}), {"numerator_offset": "x"}, "numerator_offset must be a number"),
     (({950: 1}, {750: 1}), {"name": 3}, "name must be text"),
     (({950: 1}, {750: 1}), {"name": "a/b"}, "name must hold no slash"),
+    (({950: 1}, {750: 1}), {"name": "my ratio"}, "no space, got 'my ratio'; use _ between words"),
+    (({0.95: 1}, {0.75: 1}), {}, "must be in nm, got 0.95, 0.75, which look like µm; multiply by 1000"),
 ]
 
 

@@ -8,6 +8,8 @@ from pathlib import Path
 
 import pytest
 
+import bandratio as br
+
 ROOT = Path(__file__).parents[1]
 README = (ROOT / "README.md").read_text() if (ROOT / "README.md").exists() else ""
 
@@ -32,6 +34,9 @@ def test_the_commands_run_on_the_demo(tmp_path):
         words = [sys.executable, "-m", *shlex.split(line)]
         answer = subprocess.run(words, capture_output=True, text=True, cwd=tmp_path, check=False)
         assert answer.returncode == 0, f"{line}\n{answer.stderr}{answer.stdout}"
+    flags = br.open_maps(tmp_path / "flags.tif")["flag"]
+    words = flags.attrs["flag_meanings"].split()
+    assert (flags == words.index("bright_candidate")).sum() > 10
 
 
 def test_the_test_command_is_the_one_that_the_checks_run():

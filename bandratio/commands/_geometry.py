@@ -14,12 +14,27 @@ from ._options import numbers
 __all__ = ["count_masked", "geometry_lines", "geometry_options", "normalised"]
 
 _LAWS = ("lunar_lambert", "lommel_seeliger", "lambert", "minnaert", "akimov", "hapke")
-_NEEDS_GEOMETRY = ("law", "to", "minnaert_k", "phase_function", "slope_sigma", "least_elevation", "no_spread")
+_NEEDS_GEOMETRY = (
+    "law",
+    "to",
+    "minnaert_k",
+    "phase_function",
+    "slope_sigma",
+    "least_elevation",
+    "no_spread",
+    "as_quantity",
+)
 
 
 def geometry_options(command: Callable[..., Any]) -> Callable[..., Any]:
     """Put on where the geometry comes from, and how it is normalised."""
     for option in (
+        click.option(
+            "--as-quantity",
+            metavar="QUANTITY",
+            help="Convert to this reflectance quantity before mapping, e.g. reflectance_factor, which laboratory "
+            "thresholds are in; needs the incidence of --geometry or --dem.",
+        ),
         click.option(
             "--no-spread",
             is_flag=True,
@@ -94,6 +109,10 @@ def normalised(cube: xr.DataArray, given: Mapping[str, Any]) -> xr.DataArray:
         slope_sigma=given["slope_sigma"] or 0.0,
         **options,
     )
+    if given["as_quantity"] is not None:
+        from ..photometry import convert_quantity
+
+        flat = convert_quantity(flat, given["as_quantity"])
     return flat.assign_attrs(geometry_input=str(planes.attrs.get("input", "")))
 
 

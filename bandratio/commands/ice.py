@@ -281,5 +281,7 @@ def _closing(flags: Any) -> str:
     lines.append(f"ice-free ground: {flags.attrs['ice_free']}")
     lines.append(f"ice: {flags.attrs['ice']}")
     lines.append(f"least areal ice seen at the median noise: {flags.attrs['least_areal_ice_meaning']}")
+    if "finding" in flags.attrs:
+        lines.append(f"take care: {flags.attrs['finding']}")
     lines.append(str(flags.attrs["caution"]))
     return "\n".join(lines)

@@ -6,8 +6,8 @@ __getattr__, __dir__, __all__ = _lazy.attach(
     __name__,
     submod_attrs={
         "basin": ["Basin", "make_basin"],
-        "job": ["run_demo"],
-        "scene": ["see"],
-        "shots": ["range_counts"],
+        "job": ["LIMITS", "ground_list", "normalised_scene", "run_demo"],
+        "scene": ["NOISE", "see"],
+        "shots": ["CALIBRATION", "range_counts"],
     },
 )

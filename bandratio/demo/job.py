@@ -84,7 +84,8 @@ def run_demo(folder: str | Path = "corvane", *, side: int = 640, overwrite: bool
     folder.mkdir(parents=True, exist_ok=True)
 
     scene = see(basin)
-    angles = scene[["incidence", "emission", "phase"]].to_dataarray("angle")
+    # what the relief keeps from the sun has no angle that a normalisation could use
+    angles = scene[["incidence", "emission", "phase"]].where(~scene["shadow"]).to_dataarray("angle")
     write_scene(scene["cube"], files["scene.tif"], overwrite=overwrite)
     write_scene(angles, files["angles.tif"], overwrite=overwrite)
     measured = open_cube(files["scene.tif"], quantity="radiance_factor", chunks=None)
@@ -149,30 +150,33 @@ def ground_list() -> list[str]:
 def truth_table(scene: xr.Dataset, flags: xr.Dataset, returns: xr.Dataset, ice: xr.Dataset) -> pd.DataFrame:
     """What was planted and what was found: a row for each kind of candidate.
 
-    A pixel is truly bright or dark (and flat) where its reflectances without errors are; a shot is truly icy where
-    there is frost in its beam.
+    A pixel is truly bright or dark (and flat) where its reflectances without errors are. A shot is planted where frost
+    fills one per cent of its beam or more, and a candidate is false where there is none (less than 0.01 %).
     """
     import pandas as pd
 
     true = parameters(scene["true_cube"], names=["reflectance_700", "red_slope"])
     seen = flags["flag"].values != 0
     flat = true["red_slope"].values < LIMITS["flatter_than"]
+    icy = returns["true_ice"].values
     planted = {
         "bright_candidate": (true["reflectance_700"].values > LIMITS["brighter_than"]) & flat & seen,
         "dark_candidate": (true["reflectance_700"].values < LIMITS["darker_than"]) & flat & seen,
-        "ice_candidate": returns["true_ice"].values > 0,
+        "ice_candidate": icy >= 0.01,
     }
+    truly_none = {kind: ~really for kind, really in planted.items()} | {"ice_candidate": icy < 1e-4}
     rows = []
     for kind, really in planted.items():
         variable = (ice if kind == "ice_candidate" else flags)["flag"]
         words = str(variable.attrs["flag_meanings"]).split()
         found = variable.values == variable.attrs["flag_values"][words.index(kind)]
-        false = int((found & ~really).sum())
+        false = int((found & truly_none[kind]).sum())
         rows.append(
             {
                 "kind": kind,
                 "looked_at": int(seen.sum()) if variable.ndim == 2 else variable.size,
                 "planted": int(really.sum()),
+                "planted_and_found": int((found & really).sum()),
                 "found": int(found.sum()),
                 "false": false,
                 "false_share": false / max(int(found.sum()), 1),

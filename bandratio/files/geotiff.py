@@ -36,12 +36,18 @@ def require_image(maps: xr.Dataset, path: Path) -> None:
     ValueError
         If a variable is no image, or is of a type that has no place in a GeoTIFF.
     """
+    others = {
+        str(name): tuple(array.dims)
+        for name, array in maps.data_vars.items()
+        if set(array.dims) != {"y", "x"}
+    }
+    if others:
+        told = ", ".join(f"{name} has {dims}" for name, dims in others.items())
+        raise ValueError(
+            f"{path}: a GeoTIFF holds images with the dimensions y and x, but {told}; write .zarr or .nc, or leave "
+            f"them out with maps.drop_vars({list(others)})"
+        )
     for name, array in maps.data_vars.items():
-        if set(array.dims) != {"y", "x"}:
-            raise ValueError(
-                f"{path}: a GeoTIFF holds images with the dimensions y and x, but {name} has {tuple(array.dims)}; "
-                "write .zarr or .nc"
-            )
         if array.dtype.kind not in "fiub":
             raise ValueError(
                 f"{path}: a GeoTIFF holds numbers, but {name} is {array.dtype}; write .zarr or .nc"

@@ -72,7 +72,9 @@ def ice_flags(
     gain_sigma : float
         Standard uncertainty of the red/infrared gain, as a fraction; shared by all shots.
     ice_free : None, str, list of str, mapping, array_like or DataArray, optional
-        What the ice-free ground is made of. None is any rock: safe, and blind to little ice. ``"mare"``,
+        What the ice-free ground is made of. The false discovery rate holds only where the list holds the ground; where
+        more than a twentieth of all points are candidates, the attribute ``finding`` says so. None is any rock: safe, and
+        blind to little ice. ``"mare"``,
         ``"highland"``, groups or samples of `reference_spectra`; albedos [red, infrared] at the laboratory's geometry,
         shape (material, 2), or a mapping from names to pairs; a library of spectra (sample, wavelength).
     ice_free_ratio : float, optional
@@ -164,6 +166,8 @@ def ice_flags(
         confidence=open_fraction("confidence", confidence),
     )
     opposition = positive("opposition_ratio", opposition_ratio)
+    if ice_free_ratio is None:
+        _refuse_counts(red)
     scene = Scene.of(
         {
             "red": red,
@@ -194,6 +198,20 @@ def ice_flags(
         "caution": CAUTION,
     }
     return flags
+
+
+def _refuse_counts(red: Any) -> None:
+    """Refuse numbers that can be no albedos; lazy ones are not looked at."""
+    data = red.data if isinstance(red, xr.DataArray) else red
+    if hasattr(data, "dask"):
+        return
+    values = np.asarray(data, dtype=float)
+    middle = float(np.median(values[np.isfinite(values)])) if np.isfinite(values).any() else 0.0
+    if middle > 2:
+        raise ValueError(
+            f"red must be an albedo, a fraction, but half of the values are above {middle:g}: are they counts or "
+            "percent? Use albedo_from_returns, or ice_free_ratio=… for returns that are not calibrated"
+        )
 
 
 def laser_wavelength(name: str, values: Any, given: float | None, usual: float) -> float:

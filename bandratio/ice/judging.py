@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import tempfile
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -22,7 +22,10 @@ __all__ = ["judged_scene"]
 
 Floats: TypeAlias = NDArray[np.float64]
 #: Arrays by name, the greatest p-value that is rejected, typical errors.
-_Outcome: TypeAlias = tuple[dict[str, Any], float, dict[str, float]]
+_Outcome: TypeAlias = tuple[dict[str, Any], float, float, dict[str, float]]
+#: A larger share of candidates is told: ice is rare, a ground list that does not hold the ground is not (common practice,
+#: no source).
+_MANY = 0.05
 
 _NAMES = {
     "ratio": "red/infrared albedo ratio",
@@ -44,14 +47,21 @@ _SPOOL_IN_MEMORY = 1 << 28  # bytes of p-values held in memory in a streamed pas
 def judged_scene(scene: Scene, decision: Decision, rate: float, dependence: Any) -> xr.Dataset:
     """Flags of a scene and what leads to them; lazy where its arrays are."""
     judge = _lazily if scene.chunked else _in_memory
-    results, cut, typical = judge(scene, decision, rate, dependence)
+    results, cut, share, typical = judge(scene, decision, rate, dependence)
     flags = xr.Dataset({name: scene.labelled(data, _described(name)) for name, data in results.items()})
     flags.attrs = {
         "Conventions": "CF-1.11",
         "p_value_cut": cut,
+        "candidate_share": share,
         **{f"typical_{name}": value for name, value in typical.items()},
         **_sight(scene, decision, typical),
     }
+    if share > _MANY:
+        flags.attrs["finding"] = (
+            f"{share:.0%} of all points are candidates: more likely than ice everywhere is ground that the list of ice-free "
+            "materials does not hold, and then the false discovery rate does not hold either; give ice_free=… what is "
+            "there, or None for any rock"
+        )
     return flags
 
 
@@ -79,7 +89,7 @@ def _in_memory(scene: Scene, decision: Decision, rate: float, dependence: Any) -
     over_blocks(judge, size)
     results["q_value"] = adjusted(filtered, dependence)
     shaped = {name: results[name].reshape(scene.template.shape) for name in _NAMES}
-    return shaped, cut, _typical([_medians(scene.arrays)])
+    return shaped, cut, _share([filtered], cut), _typical([_medians(scene.arrays)])
 
 
 def _lazily(scene: Scene, decision: Decision, rate: float, dependence: Any) -> _Outcome:
@@ -113,6 +123,7 @@ def _lazily(scene: Scene, decision: Decision, rate: float, dependence: Any) -> _
         cut_outer = false_discovery_cut(passed(None), rate, dependence)
         cut = false_discovery_cut(passed(cut_outer), rate, dependence)
         table = adjusted_table(passed(cut_outer), dependence)
+        share = _share(passed(cut_outer)(), cut)
 
     def finish(points: Points) -> list[NDArray]:
         judged = decision.judged(points, *decision.p_values(points), cut_outer, cut)._asdict()
@@ -121,7 +132,16 @@ def _lazily(scene: Scene, decision: Decision, rate: float, dependence: Any) -> _
         judged["q_value"] = np.where(judged["p_value"] <= cut, np.minimum(q, rate), q)
         return [judged[name] for name in _NAMES]
 
-    return scene.mapped(finish, tuple(_NAMES), _DTYPES), cut, _typical(medians)
+    return scene.mapped(finish, tuple(_NAMES), _DTYPES), cut, share, _typical(medians)
+
+
+def _share(blocks: Iterable[Floats], cut: float) -> float:
+    """Share of the judged points whose p-value passes the cut."""
+    passing = judged = 0
+    for p in blocks:
+        passing += int((p <= cut).sum())
+        judged += int((~np.isnan(p)).sum())
+    return passing / max(judged, 1)
 
 
 def _typical(medians: list[Floats]) -> dict[str, float]:

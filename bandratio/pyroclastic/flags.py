@@ -164,6 +164,10 @@ def _limits(
         )
     limits = {}
     for argument, (value, parameter) in given.items():
+        if parameter == BRIGHTNESS and isinstance(value, (int, float)) and 2 < value < np.inf:
+            raise ValueError(
+                f"{argument} is a reflectance, a fraction, got {value:g}; {value:g} % is {value / 100:g}"
+            )
         if value is None:
             continue
         if parameter not in maps:

@@ -61,9 +61,11 @@ class Membership:
                 )
             labels = labels.transpose(*dims).values
         array = np.asarray(labels)
+        if array.dtype.kind == "b":  # a mask is one region
+            array = array.astype(np.int8)
         if array.dtype.kind not in "iu":
             raise TypeError(
-                f"regions must be integer labels (0: no region), polygons (GeoDataFrame) or a path, got {array.dtype} "
+                f"regions must be integer labels (0: no region), a mask, polygons (GeoDataFrame) or a path, got {array.dtype} "
                 f"of type {type(labels).__name__}"
             )
         if array.shape != shape:
@@ -156,7 +158,14 @@ def _in_crs_of(polygons: Any, cube: xr.DataArray) -> Any:
         raise ValueError(
             "the cube has a map projection and the polygons have none; give polygons.set_crs(cube.rio.crs)"
         )
-    return polygons.to_crs(crs.to_wkt())
+    try:
+        return polygons.to_crs(crs.to_wkt())
+    except Exception as error:  # noqa: BLE001  whatever the projection library says of two bodies
+        raise ValueError(
+            f"the polygons are in {polygons.crs.name}, which does not lead to the cube's {crs.to_wkt()[:60]}… "
+            f"({' '.join(str(error).split())[:120]}); where that is not their real projection, set it with "
+            "polygons.set_crs(cube.rio.crs, allow_override=True)"
+        ) from None
 
 
 def _names_of(polygons: Any) -> NDArray:
@@ -204,13 +213,13 @@ def _inside(shape: Any, cube: xr.DataArray) -> NDArray[np.int64]:
         return nothing
     transform = grid_transform(cube)
     left, low, right, high = shape.bounds
-    corners = [~transform * corner for corner in ((left, low), (right, high))]
+    corners = [~transform @ corner for corner in ((left, low), (right, high))]
     (c0, c1), (r0, r1) = (sorted(corner[axis] for corner in corners) for axis in (0, 1))
     c0, r0 = max(int(np.floor(c0)), 0), max(int(np.floor(r0)), 0)
     c1, r1 = min(int(np.ceil(c1)), columns), min(int(np.ceil(r1)), rows)
     if c1 <= c0 or r1 <= r0:
         return nothing
-    window = transform * transform.translation(c0, r0)
+    window = transform @ transform.translation(c0, r0)
     inside = geometry_mask([shape], (r1 - r0, c1 - c0), window, invert=True)
     row, column = np.nonzero(inside)
     return (row + r0) * columns + column + c0
