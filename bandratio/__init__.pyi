@@ -39,6 +39,7 @@ from .photometry import (
     TabulatedPhase,
     convert_quantity,
     fit_photometry,
+    geometry_summary,
     masked_pixels,
     normalise,
     require_quantity,

@@ -229,7 +229,7 @@ def _delayed_columns(
     import dask
     import dask.array as da
 
-    parts = [dask.delayed(part, pure=False)(i) for i in range(len(rows))]  # type: ignore[attr-defined,no-untyped-call]
+    parts = [dask.delayed(part, pure=False)(i) for i in range(len(rows))]  # type: ignore[attr-defined]
     return {
         name: da.concatenate(
             [
