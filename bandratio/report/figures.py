@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from html import escape
 from typing import Any
 
@@ -12,12 +13,33 @@ from numpy.typing import NDArray
 from ..plots.maps import FLAG_COLOURS, value_scale
 from .pictures import PageData
 
-__all__ = ["linked_views"]
+__all__ = ["NO_DATA", "labels_of", "linked_views"]
 
 #: Colour of what is selected, and of a pixel without a flag.
 _SELECTED, _PLAIN = "#D55E00", "#4D4D4D"
-_MAP_WIDTH = 450
+#: Where a map has no value.
+NO_DATA = "#BFBFBF"
+#: Width of a view [px], and what of it and of its height is not picture; the page's script has the same numbers.
+_MAP_WIDTH, _BESIDE, _ABOVE = 450, 150, 120
+#: Characters of a line of a view's title or axis.
+_LINE = 46
+#: Outlines that would cover more of a picture than this are left away.
+_MOST_OUTLINE = 0.25
 _NUMBER = "return Number.isFinite(value) ? Number(value).toPrecision(4) : 'no data'"
+
+
+def labels_of(maps: xr.Dataset, names: list[str]) -> list[str]:
+    """Long name of each parameter with its unit, in lines short enough for a view."""
+    labels = []
+    for name in names:
+        unit = str(maps[name].attrs.get("units", "1"))
+        words = str(maps[name].attrs.get("long_name", "")) or name
+        lines = textwrap.wrap(words, _LINE, break_on_hyphens=False) or [name]
+        bracket = f" [{unit}]" if unit not in ("", "1") else ""
+        if len(lines[-1]) + len(bracket) > _LINE:
+            lines.append("")
+        labels.append("\n".join([*lines[:-1], (lines[-1] + bracket).strip()]))
+    return labels
 
 
 def linked_views(maps: xr.Dataset, data: PageData) -> dict[str, Any]:
@@ -51,7 +73,7 @@ def linked_views(maps: xr.Dataset, data: PageData) -> dict[str, Any]:
     left = _map(maps, data, "left", images, points, hovers, shown=data.shown[0])
     right = _map(maps, data, "right", images, points, hovers, shown=data.shown[1])
     right.x_range, right.y_range = left.x_range, left.y_range
-    return {"left": left, "right": right, "scatter": _scatter(data, points, hovers)}
+    return {"left": left, "right": right, "scatter": _scatter(maps, data, points, hovers)}
 
 
 def _image_columns(data: PageData) -> dict[str, list[NDArray]]:
@@ -78,7 +100,24 @@ def _flag_colours(data: PageData) -> NDArray[np.uint32]:
         if word.endswith("candidate"):
             red, green, blue = (int(_colour(word)[i : i + 2], 16) for i in (1, 3, 5))
             colours[data.flag == code] = np.uint32(red | green << 8 | blue << 16 | 255 << 24)
-    return colours
+    return _outlined(colours)
+
+
+def _outlined(colours: NDArray[np.uint32]) -> NDArray[np.uint32]:
+    """White and then black around what is coloured, so that it stands out from any colour scale."""
+    from scipy.ndimage import binary_closing, binary_dilation, binary_fill_holes
+
+    marked = colours != 0
+    # gaps between neighbouring candidates stay clear: the outline goes round the whole group
+    group = binary_fill_holes(binary_closing(marked, np.ones((3, 3)), iterations=2) | marked)
+    inner = binary_dilation(group, np.ones((3, 3)))
+    outer = binary_dilation(inner, np.ones((3, 3)))
+    if (outer & ~group).mean() > _MOST_OUTLINE:
+        return colours
+    outlined = colours.copy()
+    outlined[outer & ~inner] = 0xFF000000
+    outlined[inner & ~group] = 0xFFFFFFFF
+    return outlined
 
 
 def _tooltips(
@@ -120,7 +159,13 @@ def _figure(title: str, axes: tuple[str, str], width: int, height: int, **option
     from bokeh.plotting import figure
 
     plot = figure(
-        width=width, height=height, tools=[], toolbar_location="above", output_backend="canvas", **options
+        width=width,
+        height=height,
+        tools=[],
+        toolbar_location="above",
+        toolbar_sticky=False,  # the toolbar has a line of its own, the title the whole width
+        output_backend="canvas",
+        **options,
     )
     wheel, box = WheelZoomTool(), BoxSelectTool()
     plot.add_tools(PanTool(), wheel, box, LassoSelectTool(), TapTool(), ResetTool(), SaveTool())
@@ -133,6 +178,7 @@ def _figure(title: str, axes: tuple[str, str], width: int, height: int, **option
     for axis in (plot.xaxis, plot.yaxis):
         axis.axis_label_text_font_style = "normal"
         axis.axis_label_text_color = axis.major_label_text_color = "#222222"
+    plot.title.text_font_size = "13px"
     plot.grid.visible = False
     return plot
 
@@ -148,13 +194,12 @@ def _map(
     shown: int,
 ) -> Any:
     from bokeh.models import ColorBar, HoverTool, LinearColorMapper, Range1d
-    from bokeh.models.text import PlainText
     from matplotlib.colors import to_hex
 
     rows, columns = (abs(data.extent[3] - data.extent[2]), abs(data.extent[1] - data.extent[0]))
-    height = int(np.clip((_MAP_WIDTH - 150) * rows / columns, 220, 620)) + 90
+    height = int(np.clip((_MAP_WIDTH - _BESIDE) * rows / columns, 220, 620)) + _ABOVE
     plot = _figure(
-        data.names[shown],
+        labels_of(maps, data.names)[shown],
         data.axes,
         _MAP_WIDTH,
         height,
@@ -163,12 +208,12 @@ def _map(
         match_aspect=True,
     )
     plot.name = f"map-{side}"
-    plot.background_fill_color = "#BFBFBF"
+    plot.background_fill_color = NO_DATA
     drawn = []
     for place, name in enumerate(data.names):
         scale, norm, _ = value_scale(data.planes[name].astype(float))
         palette = [to_hex(scale(i)) for i in range(256)]
-        mapper = LinearColorMapper(palette=palette, low=norm.vmin, high=norm.vmax, nan_color="#BFBFBF")
+        mapper = LinearColorMapper(palette=palette, low=norm.vmin, high=norm.vmax, nan_color=NO_DATA)
         image = plot.image(
             f"v{place}",
             x="x",
@@ -179,11 +224,7 @@ def _map(
             color_mapper=mapper,
             name=f"image-{side}-{place}",
         )
-        unit = str(maps[name].attrs.get("units", "1"))
-        bar = ColorBar(
-            color_mapper=mapper, width=12, title=PlainText("" if unit == "1" else unit), name=f"bar-{side}-{place}",
-            title_text_font_style="normal", title_text_font_size="11px",
-        )  # fmt: skip
+        bar = ColorBar(color_mapper=mapper, width=12, name=f"bar-{side}-{place}")
         plot.add_layout(bar, "right")
         image.visible = bar.visible = place == shown
         drawn.append(image)
@@ -200,11 +241,12 @@ def _map(
     return plot
 
 
-def _scatter(data: PageData, points: Any, hovers: dict[str, Any]) -> Any:
+def _scatter(maps: xr.Dataset, data: PageData, points: Any, hovers: dict[str, Any]) -> Any:
     from bokeh.models import HoverTool
 
     first, second = data.shown
-    plot = _figure("", (data.names[first], data.names[second]), _MAP_WIDTH, 430)
+    labels = labels_of(maps, data.names)
+    plot = _figure("", (labels[first], labels[second]), _MAP_WIDTH, 430)
     plot.name = "scatter"
     drawn = plot.scatter(
         f"v{first}", f"v{second}", source=points, size=4, fill_color="colour", line_color=None, fill_alpha=0.5,

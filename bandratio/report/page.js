@@ -1,7 +1,7 @@
 "use strict";
 // Links the page's controls and table with the views; the views' models are found by their names.
 (function () {
-  const names = JSON.parse(document.getElementById("names").textContent);
+  const { names, labels } = JSON.parse(document.getElementById("names").textContent);
   const byId = (id) => document.getElementById(id);
 
   function wait(then) {
@@ -13,12 +13,29 @@
     const model = (name) => views.get_model_by_name(name);
     const points = model("points");
 
+    // three views side by side where the window has room for them, else as wide as they are
+    const all = ["map-left", "map-right", "scatter"].map(model);
+    const wide = all[0].width, beside = 150, above = 120;
+    const slope = (all[0].height - above) / (wide - beside);
+    function fit() {
+      const third = Math.floor((document.querySelector(".views").clientWidth - 2 * 16) / 3);
+      const width = third < 360 ? wide : Math.min(wide, third);
+      for (const view of all) view.width = width;
+      for (const view of all.slice(0, 2)) view.height = Math.round((width - beside) * slope) + above;
+    }
+    window.addEventListener("resize", fit);
+    fit();
+
+    // a copy of what was there stays plain text, so that dollars in a name are no formula
+    const plain = (old, text) => old.clone({ text });
+
     function showLayer(side, chosen) {
       names.forEach((name, place) => {
         model(`image-${side}-${place}`).visible = place === chosen && byId("show-values").checked;
         model(`bar-${side}-${place}`).visible = place === chosen;
       });
-      model(`map-${side}`).title.text = names[chosen];
+      const title = model(`map-${side}`).title;
+      title.text = plain(title.text, labels[chosen]);
     }
     function showLayers() {
       for (const side of ["left", "right"]) {
@@ -40,7 +57,8 @@
         for (const glyph of [renderer.glyph, renderer.selection_glyph, renderer.nonselection_glyph]) {
           if (glyph && glyph[axis]) glyph[axis] = { field: `v${place}` };
         }
-        scatter[other][0].axis_label = names[place];
+        const shown = scatter[other][0];
+        shown.axis_label = plain(shown.axis_label, labels[place]);
       }
       scatter.reset.emit();
     }

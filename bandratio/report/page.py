@@ -124,7 +124,7 @@ def _page(
     from bokeh.embed import components
     from bokeh.resources import Resources
 
-    from .figures import linked_views
+    from .figures import NO_DATA, labels_of, linked_views
 
     data = page_data(maps, flags, labels)
     views = linked_views(maps, data)
@@ -156,7 +156,7 @@ def _page(
         options_first=_options(data.names, data.shown[0]),
         options_second=_options(data.names, data.shown[1]),
         flag_layer=flag_layer,
-        legend=wording.legend(data, FLAG_COLOURS),
+        legend=wording.legend(data, {**FLAG_COLOURS, "no_data": NO_DATA}),
         views="\n".join(
             f'<div id="view-{name}" role="group" aria-label="{text}">{places[name]}</div>'
             for name, text in described.items()
@@ -166,7 +166,9 @@ def _page(
         provenance=wording.provenance(maps, flags, versions),
         command=again,
         # a name must not end the script that holds it
-        names=json.dumps(data.names).replace("<", "\\u003c").replace("&", "\\u0026"),
+        names=json.dumps({"names": data.names, "labels": labels_of(maps, data.names)})
+        .replace("<", "\\u003c")
+        .replace("&", "\\u0026"),
         scripts=script,
     )
 

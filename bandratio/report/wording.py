@@ -110,6 +110,8 @@ def picture_note(data: PageData) -> str:
     else:
         text = f"The pictures show every pixel of {rows:,} × {columns:,}."
     text += f" {len(data.points):,} pixels can be selected."
+    if data.flag is not None:
+        text += " The white and black outline of candidates only makes them easier to see."
     if data.candidates_left_out:
         text += f" {data.candidates_left_out:,} candidates are in the pictures and the table, but not among those."
     return text
@@ -121,9 +123,12 @@ def legend(data: PageData, colours: dict[str, str]) -> str:
         return ""
     items = []
     for word, count in data.counts.items():
-        colour = colours.get(word, "#FFFFFF") if word.endswith("candidate") else "#FFFFFF"
+        shown = word == "no_data" or word.endswith("candidate")
+        swatch = (
+            f'<span class="swatch" style="background:{colours.get(word, "#4D4D4D")}"></span>' if shown else ""
+        )
         items.append(
-            f'<li><span class="swatch" style="background:{colour}"></span>{escape(word.replace("_", " "))}: {count:,}</li>'
+            f"<li>{swatch}{escape(word.replace('_', ' '))}: {count:,}{'' if shown else ' (not marked)'}</li>"
         )
     return f'<ul class="legend" aria-label="Flags, with their number of pixels">{"".join(items)}</ul>'
 

@@ -164,7 +164,7 @@ def test_selecting_in_one_view_highlights_in_the_others(page, view, first, last)
     )
 
 
-def test_layers_and_axes(page):
+def test_layers_and_axes(page, made):
     from selenium.webdriver.common.by import By
     from selenium.webdriver.support.ui import Select
 
@@ -177,6 +177,8 @@ def test_layers_and_axes(page):
     assert visible(f"image-left-{wanted}")
     assert not visible(f"image-left-{names.index('reflectance_700')}")
     assert visible("flags-left")
+    title = page.run("return Bokeh.documents[0].get_model_by_name('map-left').title.text.text")
+    assert title.replace("\n", " ") == made[1]["mafic_depth"].attrs["long_name"]
     page.driver.find_element(By.ID, "show-flags").click()
     assert not visible("flags-left")
     assert not visible("flags-right")
@@ -188,6 +190,14 @@ def test_layers_and_axes(page):
         == f"v{wanted}"
     )
     assert page.complaints() == []
+
+
+def test_views_stand_side_by_side_in_a_wide_window(page):
+    tops = page.run(
+        "return ['left', 'right', 'scatter'].map(n => document.getElementById('view-' + n).getBoundingClientRect().top)"
+    )
+    assert len(set(tops)) == 1
+    assert page.run("return document.documentElement.scrollWidth <= window.innerWidth")
 
 
 def test_table_sorts_and_selects_by_keyboard(page):
