@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
@@ -103,18 +104,53 @@ def _draw(ax: Axes, planes: list[xr.DataArray], limits: Sequence[tuple[float, fl
     _key(ax, told)
 
 
+#: Size of the key's letters [pt], and the mean width of one of the default font as a share of it.
+_LETTERS, _LETTER_WIDTH = 6.0, 0.56
+
+
 def _key(ax: Axes, told: list[tuple[str, float, float, str]]) -> None:
-    """Three bars above the picture, each from dark to its full colour, with name, range and unit."""
+    """Three bars above the picture, each from dark to its full colour, with name, range and unit.
+
+    Lines of text take their place where the picture is too narrow for what stands on the bars.
+    """
+    colours = ("red", "green", "blue")
+    fitting = _width_pt(ax) / (_LETTERS * _LETTER_WIDTH)
+    longest = max(max(len(name), len(f"{low:.3g}  {high:.3g}{unit}")) for name, low, high, unit in told)
+    if longest > 0.31 * fitting:
+        lines = [
+            line
+            for colour, (name, low, high, unit) in zip(colours, told, strict=True)
+            for line in textwrap.wrap(
+                f"{colour}: {name} {low:.3g} to {high:.3g}{unit}",
+                max(12, int(fitting)),
+                subsequent_indent="  ",
+            )
+        ]
+        ax.set_title("\n".join(lines), fontsize=_LETTERS, loc="left", pad=2)
+        return
+    one_line = max(len(colour) + len(name) + 2 for colour, (name, *_) in zip(colours, told, strict=True))
+    between = " " if one_line <= 0.31 * fitting else "\n"
     for place, (name, low, high, unit) in enumerate(told):
         bar = ax.inset_axes((0.01 + 0.335 * place, 1.015, 0.31, 0.03))
         ramp = np.zeros((1, 64, 3))
         ramp[..., place] = np.linspace(0, 1, 64)
         bar.imshow(ramp, aspect="auto", extent=(0, 1, 0, 1))
         bar.set_yticks([])
-        bar.set_xticks([0, 1], [f"{low:.3g}", f"{high:.3g}{unit}"], fontsize="x-small")
+        bar.set_xticks([0, 1], [f"{low:.3g}", f"{high:.3g}{unit}"], fontsize=_LETTERS)
         bar.xaxis.tick_top()
         bar.tick_params(length=0, pad=1)
         low_label, high_label = bar.get_xticklabels()
         low_label.set_horizontalalignment("left")
         high_label.set_horizontalalignment("right")
-        bar.set_title(f"{('red', 'green', 'blue')[place]}: {name}", fontsize="x-small", pad=2)
+        bar.set_title(f"{colours[place]}:{between}{name}", fontsize=_LETTERS, pad=2)
+
+
+def _width_pt(ax: Axes) -> float:
+    """Width of the axes [pt]; where a layout has still to be made, their share of the figure."""
+    figure = ax.get_figure(root=True)
+    assert figure is not None
+    place = ax.get_subplotspec()
+    width = ax.get_window_extent().width
+    if figure.get_layout_engine() is not None and place is not None:
+        width = max(width, figure.bbox.width / place.get_gridspec().ncols)
+    return float(72 * width / figure.dpi)

@@ -26,6 +26,8 @@ _COLOURS = (
     *(PALETTE[name] for name in ("orange", "blue", "grey", "black")),
     "#882255",
 )
+#: Once the colours are used up they come again with the next of these.
+_LINES = ("-", "--", ":", "-.")
 _ROW_INCHES = 0.155
 
 
@@ -51,6 +53,8 @@ def plot_materials(
     axes: Sequence[Axes] | None = None,
 ) -> list[Axes]:
     """Every material's value of some parameters, one column a parameter and one row a material.
+
+    A material without a value of any of these parameters has no row.
 
     Parameters
     ----------
@@ -87,12 +91,18 @@ def plot_materials(
         _draw_materials(list(axes), table, chosen, thresholds or {})
         return list(axes)
     with style():
-        rows = table.sizes["sample"]
-        width = 1.75 + 1.0 / len(chosen)
+        rows = int(_with_values(table, chosen).sum())
+        width = 2.0 + 1.4 / len(chosen)
         made: Any = new_axes(len(chosen), width=width, height=0.9 + _ROW_INCHES * rows)
         columns = list(made) if len(chosen) > 1 else [made]
         _draw_materials(columns, table, chosen, thresholds or {})
     return columns
+
+
+def _with_values(table: xr.Dataset, names: Sequence[str]) -> np.ndarray:
+    """Which samples have a value of any of these parameters; all of them where none has."""
+    known = np.any([np.isfinite(np.asarray(table[name].values, dtype=float)) for name in names], axis=0)
+    return known if known.any() else np.ones_like(known)
 
 
 def _draw_materials(
@@ -100,7 +110,8 @@ def _draw_materials(
 ) -> None:
     groups = _groups_of(table)
     colours = group_colours(table)
-    order = [row for group in colours for row in range(len(groups)) if groups[row] == group]
+    known = _with_values(table, names)
+    order = [row for group in colours for row in np.flatnonzero(known).tolist() if groups[row] == group]
     at = np.arange(len(order))[::-1]
     starts = [i for i in range(1, len(order)) if groups[order[i]] != groups[order[i - 1]]]
     for column, (ax, name) in enumerate(zip(axes, names, strict=True)):
@@ -145,7 +156,7 @@ def _draw_materials(
 
 def _name_groups(ax: Axes, groups: list[str], order: list[int], at: np.ndarray) -> None:
     """Names of the groups on the right edge of the last column."""
-    for group in dict.fromkeys(groups):
+    for group in dict.fromkeys(groups[row] for row in order):
         rows = at[[groups[row] == group for row in order]]
         ax.annotate(
             _plain(group).replace(" ", "\n", 1) if len(group) > 12 and rows.size > 1 else _plain(group),
@@ -159,6 +170,8 @@ def _name_groups(ax: Axes, groups: list[str], order: list[int], at: np.ndarray) 
 
 def _draw_threshold(ax: Axes, threshold: Threshold) -> None:
     ax.axvline(threshold.value, color="black", linewidth=0.9, linestyle="--", zorder=2)
+    sigma = f" ± {threshold.sigma:.2g}" if threshold.sigma else ""
+    ax.set_title(f"threshold {threshold.value:.3g}{sigma}", fontsize=6.5, pad=3)
     if threshold.sigma:
         low, high = threshold.value - threshold.sigma, threshold.value + threshold.sigma
         ax.axvspan(low, high, color="#cccccc", alpha=0.6, linewidth=0, zorder=1)
@@ -223,6 +236,7 @@ def plot_spectra(
 
 def _draw_spectra(ax: Axes, spectra: xr.DataArray, wavelengths: Sequence[float], fwhm: Any) -> None:
     colours = group_colours(spectra)
+    lines = {group: _LINES[i // len(_COLOURS) % len(_LINES)] for i, group in enumerate(colours)}
     seen: set[str] = set()
     for row, group in enumerate(_groups_of(spectra)):
         own = spectra.isel(sample=row).dropna("wavelength")
@@ -232,8 +246,8 @@ def _draw_spectra(ax: Axes, spectra: xr.DataArray, wavelengths: Sequence[float],
         seen.add(group)
         marker = "." if own.sizes["wavelength"] < 20 else None
         ax.plot(
-            own["wavelength"].values, own.values, color=colours[group], linewidth=0.9, marker=marker, markersize=3,
-            alpha=0.85, label=label,
+            own["wavelength"].values, own.values, color=colours[group], linewidth=0.9, linestyle=lines[group],
+            marker=marker, markersize=3, alpha=0.85, label=label,
         )  # fmt: skip
     widths = np.broadcast_to(np.nan if fwhm is None else np.asarray(fwhm, dtype=float), np.shape(wavelengths))
     for centre, width in zip(wavelengths, widths, strict=True):
@@ -245,7 +259,7 @@ def _draw_spectra(ax: Axes, spectra: xr.DataArray, wavelengths: Sequence[float],
     ax.set_ylabel(labelled(spectra.rename(spectra.name or "reflectance")))
     ax.set_ylim(bottom=0)
     ax.margins(x=0.01)
-    ax.legend(loc="upper left", bbox_to_anchor=(1.01, 1.0), borderaxespad=0.2, handlelength=1.4)
+    ax.legend(loc="upper left", bbox_to_anchor=(1.01, 1.0), borderaxespad=0.2, handlelength=2.2)
 
 
 def plot_separation(thresholds: dict[str, Threshold], *, ax: Axes | None = None) -> Axes:

@@ -129,9 +129,18 @@ def _draw_values(ax: Axes, picture: xr.DataArray, extent: tuple[float, float, fl
 
 
 def _wrapped(text: str, width: int = 34) -> str:
+    """Lines short enough for a colour bar; a unit in brackets stays whole."""
     import textwrap
 
-    return "\n".join(textwrap.wrap(text, width))
+    name, bracket, unit = text.partition(" [")
+    lines = textwrap.wrap(name, width)
+    if not bracket:
+        return "\n".join(lines)
+    if lines and len(lines[-1]) + len(unit) + 2 <= width:
+        lines[-1] += f" [{unit}"
+    else:
+        lines.append(f"[{unit}")
+    return "\n".join(lines)
 
 
 def value_scale(numbers: NDArray, *, is_sigma: bool = False) -> tuple[Colormap, Normalize, str]:

@@ -3,6 +3,7 @@
 import matplotlib as mpl
 import numpy as np
 import pytest
+import xarray as xr
 
 import bandratio as br
 
@@ -31,7 +32,9 @@ def test_every_material_is_a_point_at_its_value():
     np.testing.assert_allclose(np.sort(drawn[np.isfinite(drawn)]), np.sort(expected[np.isfinite(expected)]))
     labels = [label.get_text() for label in axes[0].get_yticklabels()]
     assert "Soil 62231" in labels
-    assert len(labels) == table.sizes["sample"]
+    # a material without a value of either has no row
+    known = np.isfinite(table.red_slope.values) | np.isfinite(table.mafic_depth.values)
+    assert len(labels) == known.sum() < table.sizes["sample"]
     assert axes[0].get_xlabel() == "red_slope\n[% per 100 nm]"
     axes[0].figure.canvas.draw()
 
@@ -49,6 +52,7 @@ def test_a_threshold_is_a_line():
     (axes,) = plot_materials(br.material_table(BANDS), "mafic_depth", thresholds=found)
     dashed = [line for line in axes.lines if line.get_linestyle() == "--"]
     assert dashed[0].get_xdata()[0] == found["mafic_depth"].value
+    assert axes.get_title().startswith("threshold 0.03")
 
 
 def test_spectra_are_drawn_at_their_own_channels():
@@ -59,6 +63,17 @@ def test_spectra_are_drawn_at_their_own_channels():
     assert len(ax.lines) == table.sizes["sample"]
     assert len(ax.patches) == 2
     assert ax.get_xlabel() == "wavelength [nm]"
+
+
+def test_groups_beyond_the_colours_have_lines_of_their_own():
+    samples = [f"sample {i}" for i in range(25)]
+    spectra = xr.DataArray(
+        np.full((25, 3), 0.2), dims=("sample", "wavelength"),
+        coords={"sample": samples, "wavelength": [500.0, 600.0, 700.0], "group": ("sample", [f"group {s}" for s in samples])},
+        name="reflectance",
+    )  # fmt: skip
+    looks = {(line.get_color(), line.get_linestyle()) for line in plot_spectra(spectra).lines}
+    assert len(looks) == 25
 
 
 def test_roc_curve_and_the_chosen_point():
