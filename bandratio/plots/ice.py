@@ -18,6 +18,8 @@ __all__ = ["plot_ice_plane"]
 _SINGLE = ("unexplained", "opaque_like", "ice_candidate")
 _POINTS = 20_000
 _SAMPLE = 1_000_000
+#: Axes of this height have room for a small picture of the whole plane under the key.
+_ROOMY_INCHES = 2.8
 
 
 def plot_ice_plane(
@@ -53,7 +55,8 @@ def plot_ice_plane(
     Notes
     -----
     Filled: what ice-free ground can be. Heavy line: its edges that face ice, beyond which a shot is a candidate.
-    Squares: pure ices; a shot with some ice lies between ground and ice. A flag is an indicator, never proof of ice.
+    Squares: pure ices; a shot with some ice lies between ground and ice. The view is that of the data; where ices
+    lie outside, a small picture beside it shows the whole plane (one view shows all on axes lower than 2.8 inches). A flag is an indicator, never proof of ice.
     """
     if not isinstance(flags, xr.Dataset) or "flag" not in flags:
         raise ValueError("flags must be the Dataset that ice_flags gives, with its variable flag")
@@ -62,7 +65,7 @@ def plot_ice_plane(
         _draw(ax, flags, across, up, labels)
         return ax
     with style():
-        made = new_axes(width=6.2, height=3.8)
+        made = new_axes(width=7.0, height=3.8)
         _draw(made, flags, across, up, labels)
     return made
 
@@ -83,8 +86,12 @@ def _draw(ax: Any, flags: xr.Dataset, red: NDArray, infrared: NDArray, labels: i
     rng = np.random.default_rng(0)
     rest = known & ~np.isin(codes, [code for code, word in words.items() if word in (*_SINGLE, "no_data")])
     right = _ground(ax, flags)
-    ices = _ices(ax, flags, labels)
-    extent = _extent(red[known], infrared[known], right, ices)
+    extent = _extent(red[known], infrared[known], right)
+    if _height_inches(ax) < _ROOMY_INCHES and "ice_red" in flags.attrs:
+        # no room for a second picture under the key: one view of all
+        most = [1.1 * float(np.max(flags.attrs[f"ice_{name}"])) for name in ("red", "infrared")]
+        extent = extent[0], max(extent[1], most[0]), extent[2], max(extent[3], most[1])
+    _ices(ax, flags, labels, extent)
     chosen = _thinned(np.flatnonzero(rest), _SAMPLE, rng)
     if chosen.size > 3000:
         ax.hexbin(
@@ -123,11 +130,45 @@ def _ground(ax: Any, flags: xr.Dataset) -> float:
     return float(corners[:, 0].max())
 
 
-def _ices(ax: Any, flags: xr.Dataset, labels: int) -> NDArray[np.float64]:
-    """Draw the pure ices and name some of them."""
+def _height_inches(ax: Any) -> float:
+    return float(ax.get_window_extent().height / ax.get_figure(root=True).dpi)
+
+
+def _ices(ax: Any, flags: xr.Dataset, labels: int, extent: tuple[float, float, float, float]) -> None:
+    """Draw the pure ices and name some of them, in a small picture of the whole plane where they lie outside."""
     if "ice_red" not in flags.attrs:
-        return np.empty((0, 2))
+        return
+    from mpl_toolkits.axes_grid1.inset_locator import inset_axes
+
     ices = np.column_stack([flags.attrs["ice_red"], flags.attrs["ice_infrared"]])
+    left, right, bottom, top = extent
+    inside = (ices[:, 0] < right) & (ices[:, 1] < top)
+    if inside.all():
+        _name_ices(ax, flags, ices, labels)
+        return
+    _name_ices(ax, flags, ices, 0)
+    whole = inset_axes(
+        ax, 1.65, 1.7, loc="lower left", bbox_to_anchor=(1, 0), bbox_transform=ax.transAxes, borderpad=3.6
+    )
+    _ground(whole, flags)
+    _name_ices(whole, flags, ices, labels)
+    whole.plot(
+        [left, right, right, left, left], [bottom, bottom, top, top, bottom], color="#555555", linewidth=0.7
+    )
+    whole.annotate(
+        "view at left", (left, top), xytext=(1, 2), textcoords="offset points", fontsize=6, color="#555555"
+    )
+    widest, tallest = max(right, ices[:, 0].max()), max(top, ices[:, 1].max())
+    whole.set_xlim(-0.05 * widest, 1.08 * widest)
+    whole.set_ylim(-0.08 * tallest, 1.1 * tallest)
+    whole.tick_params(labelsize=6, length=2)
+    # a layout leaves room for texts, not for small pictures
+    ax.annotate(
+        "\u2009", (1, 0), xycoords="axes fraction", xytext=(150, 0), textcoords="offset points", fontsize=1
+    )
+
+
+def _name_ices(ax: Any, flags: xr.Dataset, ices: NDArray, labels: int) -> None:
     ax.plot(
         *ices.T,
         "s",
@@ -140,23 +181,23 @@ def _ices(ax: Any, flags: xr.Dataset, labels: int) -> NDArray[np.float64]:
     names = str(flags.attrs.get("ice_names", "")).split(", ")
     order = np.argsort(ices[:, 1])
     named = order[np.unique(np.linspace(0, len(order) - 1, min(labels, len(order))).astype(int))]
-    for index in named:
+    for place, index in enumerate(named):
         low = ices[index, 1] < 0.1 * ices[:, 1].max()
+        far = ices[index, 0] > 0.8 * ices[:, 0].max()
+        # in the lowest row every other name stands higher, and none runs out of the picture
+        offset = (6 * far, 11 - 7 * (place % 2)) if low else (-4, 0)
         ax.annotate(
-            names[index], ices[index], xytext=(0, 5) if low else (-5, 0), textcoords="offset points", fontsize=6,
-            ha="center" if low else "right", va="bottom" if low else "center", zorder=7,
+            names[index], ices[index], xytext=offset, textcoords="offset points", fontsize=6,
+            ha="center" if low and not far else "right", va="bottom" if low else "center", zorder=7,
         )  # fmt: skip
-    return ices
 
 
-def _extent(
-    red: NDArray, infrared: NDArray, right: float, ices: NDArray
-) -> tuple[float, float, float, float]:
-    """Limits of the picture: all that was flagged, and the ices."""
+def _extent(red: NDArray, infrared: NDArray, right: float) -> tuple[float, float, float, float]:
+    """Limits of the picture: all that was flagged, and the ground next to it."""
     far = np.percentile(red, 99.99) if red.size else right
     high = np.percentile(infrared, 99.99) if infrared.size else 0.3
-    widest = max(far, min(right, 1.5 * far), ices[:, 0].max(initial=0.0)) * 1.06
-    tallest = max(high, ices[:, 1].max(initial=0.0)) * 1.1
+    widest = max(far, min(right, 1.5 * far)) * 1.06
+    tallest = high * 1.25
     return -0.02 * widest, float(widest), -0.03 * tallest, float(tallest)
 
 
@@ -197,7 +238,7 @@ def _singles(
 def _error_cross(
     ax: Any, flags: xr.Dataset, typical: NDArray, extent: tuple[float, float, float, float]
 ) -> None:
-    """Draw the typical one-sigma error of a shot on typical ground."""
+    """Draw the typical error of a shot on typical ground: five sigma, or one where five would fill the picture."""
     told = [
         [float(flags.attrs.get(f"typical_{kind}_{name}", np.nan)) for name in ("red", "infrared")]
         for kind in ("sigma", "relative")
@@ -205,11 +246,15 @@ def _error_cross(
     sigmas = np.hypot(told[0], np.array(told[1]) * typical)
     if not np.isfinite(sigmas).all():
         return
-    place = extent[0] + 0.08 * (extent[1] - extent[0]), extent[2] + 0.93 * (extent[3] - extent[2])
-    ax.errorbar(*place, xerr=sigmas[0], yerr=sigmas[1], color="black", linewidth=0.8, capsize=1.5, zorder=7)
+    size = np.array([extent[1] - extent[0], extent[3] - extent[2]])
+    times = 5 if (5 * sigmas < 0.12 * size).all() else 1
+    drawn = times * sigmas
+    place = extent[0] + 0.03 * size[0] + drawn[0], extent[3] - 0.04 * size[1] - drawn[1]
+    ax.errorbar(*place, xerr=drawn[0], yerr=drawn[1], color="black", linewidth=0.8, capsize=1.5, zorder=7)
     ax.annotate(
-        "1 σ of a typical shot", place, xytext=(9, 0), textcoords="offset points", va="center", fontsize=6
-    )
+        f"± {times} σ of a typical shot", (place[0] + drawn[0], place[1]), xytext=(4, 0), textcoords="offset points",
+        va="center", fontsize=6,
+    )  # fmt: skip
 
 
 def _legend(ax: Any, handles: list[Any], rest: int, *, hull: bool) -> None:
@@ -236,8 +281,8 @@ def _legend(ax: Any, handles: list[Any], rest: int, *, hull: bool) -> None:
     ax.legend(
         [handle for handle, _ in shown],
         [text for _, text in shown],
-        loc="center left",
-        bbox_to_anchor=(1.01, 0.5),
+        loc="upper left",
+        bbox_to_anchor=(1.01, 1.0),
         title="A flag is an indicator,\nnever proof of ice.",
         alignment="left",
         fontsize=6.5,

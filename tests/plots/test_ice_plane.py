@@ -33,7 +33,22 @@ def test_the_picture_shows_hull_ices_and_candidates(scene, ground):
     assert ax.get_xlabel() == "albedo at 640 nm"
     left, right = ax.get_xlim()
     assert left < 0.4 < right
+    assert "± 5 σ of a typical shot" in [text.get_text() for text in ax.texts]
     mpl.pyplot.close(ax.figure)
+
+
+@pytest.mark.parametrize("height", [3.5, 1.5])
+def test_every_ice_is_in_view(scene, height):
+    """In a small picture beside the data, or in the one view of axes that are too low for two."""
+    from matplotlib.figure import Figure
+
+    flags = br.ice_flags(*scene, 0.002, 0.002, ice_free=LIST)
+    ax = br.plot_ice_plane(flags, *scene, ax=Figure().add_axes((0.1, 0.1, 0.5, height / 4.8)))
+    views = [ax, *ax.figure.axes[1:], *ax.child_axes]
+    assert len(views) == (2 if height > 3 else 1)
+    assert views[-1].get_xlim()[1] > max(flags.attrs["ice_red"])
+    assert views[-1].get_ylim()[1] > max(flags.attrs["ice_infrared"])
+    assert (ax.get_xlim()[1] < max(flags.attrs["ice_red"])) == (height > 3)
 
 
 def test_it_draws_on_given_axes_and_names_bad_input(scene):
