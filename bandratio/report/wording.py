@@ -111,7 +111,7 @@ def picture_note(data: PageData) -> str:
         text = f"The pictures show every pixel of {rows:,} × {columns:,}."
     text += f" {len(data.points):,} pixels can be selected."
     if data.flag is not None:
-        text += " The white and black outline of candidates only makes them easier to see."
+        text += " A white and black outline round candidates is no candidate; it makes them easier to see."
     if data.candidates_left_out:
         text += f" {data.candidates_left_out:,} candidates are in the pictures and the table, but not among those."
     return text

@@ -120,7 +120,36 @@ def test_maps_in_degrees_and_with_gaps(tmp_path):
     page = br.write_report(
         maps, tmp_path / "degrees.html", flags=br.pyroclastic_flags(maps, brighter_than=0.2)
     )
-    assert "latitude 4" in text_of(page)
+    text = " ".join(text_of(page).split())
+    assert "latitude 4" in text
+    assert "x [°] y [°]" in text
+    assert "true area [km²]" in text
+    assert "map unit" not in text
+
+
+def test_places_of_regions_have_a_unit_and_few_digits(tmp_path):
+    _, maps, flags = maps_and_flags()
+    text = " ".join(text_of(br.write_report(maps, tmp_path / "page.html", flags=flags)).split())
+    assert "area [map unit²] x [pixel] y [pixel]" in text
+    # the middle of columns 3 to 6 and rows 2 to 4
+    assert "4.500 3.000" in text
+
+
+def test_outlines_are_white_and_black_round_groups_and_left_away_where_they_would_hide_the_map():
+    from bandratio.report.figures import _outlined
+
+    orange = np.uint32(0xFF009FE6)
+    colours = np.zeros((40, 40), dtype=np.uint32)
+    colours[10:20, 10:20] = orange
+    colours[14, 14] = 0
+    seen = _outlined(colours)
+    assert (seen == orange).sum() == 99
+    assert seen[14, 14] == 0
+    assert seen[9, 9:21].tolist() == [0xFFFFFFFF] * 12
+    assert seen[8, 8:22].tolist() == [0xFF000000] * 14
+    assert seen[7, 7:23].tolist() == [0] * 16
+    colours[::6, ::6] = orange
+    assert (_outlined(colours) == colours).all()
 
 
 @pytest.mark.parametrize(
