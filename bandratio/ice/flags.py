@@ -205,7 +205,9 @@ def _refuse_counts(red: Any) -> None:
     data = red.data if isinstance(red, xr.DataArray) else red
     if hasattr(data, "dask"):
         return
-    values = np.asarray(data, dtype=float)
+    values = np.asarray(data)
+    if values.dtype.kind not in "fiu":
+        return  # what is no number at all is told where it is labelled
     middle = float(np.median(values[np.isfinite(values)])) if np.isfinite(values).any() else 0.0
     if middle > 2:
         raise ValueError(
