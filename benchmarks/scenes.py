@@ -59,5 +59,7 @@ def raw_raster(path: Path, rows: int, columns: int, *, interleave: str = "bil", 
         "interleave": interleave, "byte order": 0, "wavelength units": "Nanometers", "wavelength": "{" + WAVELENGTHS + "}",
     }  # fmt: skip
     # the first word is what readers of such headers look for
-    path.with_suffix(".hdr").write_text("ENVI\n" + "".join(f"{key} = {value}\n" for key, value in header.items()))
+    path.with_suffix(".hdr").write_text(
+        "ENVI\n" + "".join(f"{key} = {value}\n" for key, value in header.items())
+    )
     return path
