@@ -60,7 +60,6 @@ def write_raw(folder, values, interleave, *, name="scene.img", **header):
         "lines": rows,
         "bands": bands,
         "header offset": header.pop("header_offset", 0),
-        "file type": "ENVI Standard",
         "data type": codes[values.dtype.name],
         "interleave": interleave,
         "byte order": int(big),
