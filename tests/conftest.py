@@ -7,7 +7,12 @@ import pytest
 from hypothesis import HealthCheck, settings
 
 settings.register_profile(
-    "default", deadline=None, max_examples=60, suppress_health_check=[HealthCheck.too_slow], print_blob=True
+    "default",
+    deadline=None,
+    derandomize=True,
+    max_examples=60,
+    suppress_health_check=[HealthCheck.too_slow],
+    print_blob=True,
 )
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "default"))
 

@@ -149,6 +149,8 @@ def convex_hull(points: ArrayLike) -> Hull:
     from scipy.spatial import ConvexHull
 
     cloud = np.asarray(points, dtype=float)
+    # no albedo is told from zero at this size, and an edge's slope may overflow
+    cloud = np.where(np.abs(cloud) < 1e-100, 0.0, cloud)
     if cloud.ndim != 2 or cloud.shape[1] != 2:
         raise ValueError(f"points of a hull must have shape (point, 2), got {cloud.shape}")
     if not np.isfinite(cloud).all():
