@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from hypothesis import assume, given, settings
+from hypothesis import assume, example, given, settings
 from hypothesis import strategies as st
 from scipy.stats import norm
 
@@ -305,6 +305,7 @@ def test_errors_common_to_both_albedos_are_taken():
 
 
 @given(st.lists(st.tuples(st.floats(-1, 1), st.floats(-1, 1)), min_size=2, max_size=40))
+@example([(0.0, 1.0), (-5e-324, 0.0)])  # smaller than any albedo, its slope would overflow
 def test_any_points_have_a_hull_that_holds_them(points):
     distinct = np.unique(np.round(np.array(points), 9), axis=0)
     assume(len(distinct) > 1)
