@@ -307,8 +307,7 @@ def test_errors_common_to_both_albedos_are_taken():
 @given(st.lists(st.tuples(st.floats(-1, 1), st.floats(-1, 1)), min_size=2, max_size=40))
 @example([(0.0, 1.0), (-5e-324, 0.0)])  # smaller than any albedo, its slope would overflow
 def test_any_points_have_a_hull_that_holds_them(points):
-    distinct = np.unique(np.round(np.array(points), 9), axis=0)
-    assume(len(distinct) > 1)
+    assume(np.ptp(np.array(points), axis=0).max() > 1e-8)  # nearer ones are one point, which has no hull
     hull = convex_hull(points)
     assert hull.excess(points).max() < 1e-6
     assert (hull.slopes > 0).all()
@@ -319,8 +318,7 @@ def test_any_points_have_a_hull_that_holds_them(points):
 
 @given(st.lists(st.tuples(st.floats(0, 1), st.floats(0, 1)), min_size=3, max_size=60))
 def test_fewer_edges_still_bound_the_whole_hull_and_little_more(points):
-    distinct = np.unique(np.round(np.array(points), 9), axis=0)
-    assume(len(distinct) > 1)
+    assume(np.ptp(np.array(points), axis=0).max() > 1e-8)  # nearer ones are one point, which has no hull
     hull = convex_hull(points)
     kept = hull.bounding_edges()
     assert len(kept) <= len(hull.offsets)
